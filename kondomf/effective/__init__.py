@@ -1,0 +1,1 @@
+"""Which few-parameter model describes the low energies?"""

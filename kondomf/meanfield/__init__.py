@@ -1,0 +1,1 @@
+"""Which Gaussian states are stationary, and are they minima? MeanFieldModel to Solution."""

@@ -1,0 +1,1 @@
+"""What does a measurement say about the parameters?"""

@@ -1,0 +1,1 @@
+"""Which bilinears, one-body couplings and quadratic form? Material to MeanFieldModel."""

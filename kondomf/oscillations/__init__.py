@@ -1,0 +1,1 @@
+"""What would a magnetometer or a transport probe see?"""

@@ -1,0 +1,1 @@
+"""What does a person look at? Figures from stored results."""

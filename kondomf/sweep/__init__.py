@@ -1,0 +1,1 @@
+"""Which points, in which order, on which workers, stored how?"""
