@@ -1,0 +1,75 @@
+"""Curvature of the constrained free energy: what tells a minimum from a saddle."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.meanfield.evaluate import response
+from kondomf.meanfield.problem import Point, Problem
+
+Array = NDArray[np.float64]
+
+NULL = 1e-13
+"""Directions whose response is below this fraction of the largest do not change the state: curvature 1."""
+
+
+@dataclass(frozen=True)
+class Curvature:
+    """Spectral form of H = 1 + R^T V R with R R^T the constrained response.
+
+    eigenvalues : (d,) ascending, dimensionless (fixed-point directions count 1).
+    root_vectors : (Na, d), R times the eigenvectors: change of the correlators P along each mode, unit of 1/sqrt(meV).
+    v : (Na, Na) quadratic form among the active channels.
+    """
+
+    eigenvalues: Array
+    root_vectors: Array
+    v: Array
+
+    @property
+    def lowest(self) -> float:
+        """Lowest curvature; 1 where no field changes the state."""
+        return float(self.eigenvalues.min(initial=1.0))
+
+    def coordinates(self, active_fields: Array) -> Array:
+        """Components (d,) of a vector over the active channels along the modes, R^T x."""
+        return self.root_vectors.T @ active_fields
+
+    def fields(self, y: Array, rest: Array, nu: float) -> Array:
+        """Change of the active fields (rest + V R y)/(1 + nu) of the regularised step."""
+        return (rest + self.v @ (self.root_vectors @ y)) / (1 + nu)
+
+
+def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) -> Curvature:
+    """Curvature at `point`, inside the problem's class or in the full space of fields.
+
+    M = -Pi, projected on the constraints: M - M C^T (C M C^T)^-1 C M = R R^T; H = 1 + R^T V R.
+    """
+    model, active = problem.model, problem.model.active
+    m = -response(model, problem.zone, point.state, active)
+    v = model.v[np.ix_(active, active)]
+    c = model.c[:, active]
+    basis = None if full_space else problem.basis
+    if basis is not None:
+        m, c = basis.T @ m @ basis, c @ basis
+    mc = m @ c.T
+    m = m - mc @ np.linalg.pinv(c @ mc, rcond=1e-12, hermitian=True) @ mc.T
+    size, q = np.linalg.eigh((m + m.T) / 2)
+    keep = size > NULL * max(size.max(initial=0.0), 1e-300)
+    r = q[:, keep] * np.sqrt(size[keep])
+    if basis is not None:
+        r = basis @ r
+    eigenvalues, z = np.linalg.eigh(np.eye(r.shape[1]) + r.T @ v @ r)
+    return Curvature(eigenvalues, r @ z, v)
+
+
+def gauge_copies(problem: Problem, point: Point) -> list[Point]:
+    """The other three gauge copies of a decoupled point: the same state, which sees other uniform hybridizations."""
+    from dataclasses import replace
+
+    copies = []
+    for signs in problem.model.gauge_signs[1:]:
+        state = problem.evaluate(signs * point.phi)
+        copies.append(replace(point, phi=signs * point.phi, state=state, residual=signs * point.residual))
+    return copies

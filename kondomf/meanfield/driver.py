@@ -1,0 +1,125 @@
+"""The one loop that takes fields downhill to a stationary point and certifies what it is."""
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies
+from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, Point, Problem, point_at
+from kondomf.meanfield.steps import Mixing, TrustRegion
+
+Array = NDArray[np.float64]
+
+ROUNDING = 1e-11
+"""Rounding error of F in units of the largest coupling; a rise within it is none."""
+
+
+@dataclass(frozen=True)
+class Settings:
+    """When to stop and what to accept.
+
+    residual : largest residual component of a solution, in units of the largest coupling.
+    curvature : a lower curvature than minus this makes a saddle.
+    decoupled : correlators between spinons and electrons below this count as none.
+    mixing_steps, newton_steps : step limits of the two phases.
+    keep_saddle : stop at the first stationary point instead of leaving saddles downhill.
+    """
+
+    residual: float = 1e-9
+    curvature: float = 1e-6
+    decoupled: float = 1e-6
+    mixing_steps: int = 8
+    newton_steps: int = 120
+    keep_saddle: bool = False
+
+
+@dataclass(frozen=True)
+class Descent:
+    """Where a start ended: point, status, why, its curvatures, and the history of (step, matrices, F, residual)."""
+
+    point: Point
+    status: str
+    message: str
+    curvature: Curvature | None
+    curvature_min: float | None
+    history: tuple[tuple[str, int, float, float], ...]
+
+
+def is_stationary(point: Point, scale: float, settings: Settings) -> bool:
+    """True when residual and constraints are within tolerance."""
+    small = np.abs(point.residual).max(initial=0.0) <= settings.residual * scale
+    return bool(small and point.constraint_error <= 10 * CONSTRAINT_TOLERANCE)
+
+
+def is_decoupled(problem: Problem, point: Point, settings: Settings) -> bool:
+    """True when no correlator joins spinons and electrons (all hybridizations vanish)."""
+    return bool(np.abs(point.p[problem.model.hybridization]).max(initial=0.0) < settings.decoupled)
+
+
+def descend(
+    problem: Problem,
+    fields: Array,
+    settings: Settings | None = None,
+    progress: Callable[[str, int, float, float], None] | None = None,
+) -> Descent:
+    """Lower F from the fields (N,) until a certified stationary point or a step limit; F never rises.
+
+    Never raises on numerical trouble: the status says "minimum", "saddle" or "not-converged".
+    `progress` is called after every step with (step name, matrices so far, F, largest residual), as in the history.
+    """
+    settings = settings or Settings()
+    scale = problem.model.scale
+    history: list[tuple[str, int, float, float]] = []
+
+    def record(name: str, at: Point) -> None:
+        history.append((name, problem.matrices, at.free_energy, float(np.abs(at.residual).max(initial=0.0))))
+        if progress:
+            progress(*history[-1])
+
+    point = point_at(problem, fields)
+    record("start", point)
+    if not point.is_finite:
+        return Descent(point, "not-converged", "the start has no finite free energy", None, None, tuple(history))
+    for step, limit in ((Mixing(), settings.mixing_steps), (TrustRegion(), settings.newton_steps)):
+        memory = step.init()
+        for _ in range(limit):
+            if is_stationary(point, scale, settings):
+                verdict, point = certify(problem, point, settings)
+                if verdict.status == "minimum" or settings.keep_saddle:
+                    return replace(verdict, history=tuple(history))
+                memory = step.init()
+                if not isinstance(step, TrustRegion):
+                    break
+            change, memory = step.propose(problem, point, memory)
+            trial = _moved(problem, point, change)
+            accepted = trial.is_finite and trial.free_energy <= point.free_energy + ROUNDING * scale
+            memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
+            if accepted:
+                point = trial
+            record(step.name, point)
+    message = f"not stationary after {len(history) - 1} steps; try another start, seed or temperature"
+    return Descent(point, "not-converged", message, None, None, tuple(history))
+
+
+def certify(problem: Problem, point: Point, settings: Settings) -> tuple[Descent, Point]:
+    """Verdict on a stationary point, and the point to go on from: for a decoupled state the softest gauge copy.
+
+    The gauge copies of a decoupled state are the same physical state but see different uniform hybridizations, so
+    its lowest curvature is the lowest over all of them.
+    """
+    curvatures = [(point, curvature_at(problem, point))]
+    if is_decoupled(problem, point, settings):
+        curvatures += [(copy, curvature_at(problem, copy)) for copy in gauge_copies(problem, point)]
+    softest, curvature = min(curvatures, key=lambda pair: pair[1].lowest)
+    stable = curvature.lowest >= -settings.curvature
+    status = "minimum" if stable else "saddle"
+    message = "stationary; F falls in no direction" if stable else "stationary; there are directions in which F falls"
+    return Descent(point, status, message, curvature, curvature.lowest, ()), point if stable else softest
+
+
+def _moved(problem: Problem, point: Point, change: Array) -> Point:
+    fields = point.phi.copy()
+    fields[problem.model.active] += problem.project(change)
+    return point_at(problem, fields)

@@ -1,0 +1,133 @@
+"""One evaluation: fields phi -> free energy, correlators, and the response to the fields (plain numpy)."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.meanfield.zone import ZoneRule
+from kondomf.model import MeanFieldModel
+
+Array = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+CHUNK = 4096
+"""Wave vectors worked on at a time; bounds the memory."""
+
+
+@dataclass(frozen=True)
+class Evaluation:
+    """Gaussian state of the fields phi.
+
+    omega : grand potential of H_MF per magnetic cell, meV.
+    entropy : entropy per magnetic cell, in k_B.
+    p : (N,) correlators P_p = <i gamma_a(0) gamma_b(R)>.
+    chunks : eigenvalues (Nk, n) and eigenvectors (Nk, n, n) of h(k) with their slice of the zone; empty unless kept.
+    """
+
+    omega: float
+    entropy: float
+    p: Array
+    chunks: tuple[tuple[slice, Array, Complex], ...]
+
+
+def bloch_matrix(model: MeanFieldModel, phi: Array, phases: Complex) -> Complex:
+    """h(k)[a, b] += 2i phi_p e^(ik.R) and its Hermitian conjugate; phases (Nk, NR) -> (Nk, n, n), meV."""
+    n = model.n_majorana
+    real_space = np.zeros((len(model.lattice_vectors), n, n))
+    np.add.at(real_space, model.position, 2 * phi)
+    half = 1j * (phases @ real_space.reshape(len(real_space), n * n)).reshape(-1, n, n)
+    return half + half.conj().swapaxes(1, 2)
+
+
+def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = False) -> Evaluation:
+    """Correlators and grand potential of H_MF = sum_p phi_p O_p at the model's temperature.
+
+    omega = -(T/2) sum_k w_k sum_n ln 2cosh(e_n/2T), P_p = Re[i sum_k w_k tanh(h/2T)_ab e^(-ik.R)].
+    `keep` retains the eigen-decompositions for `response`. Source: Gibbs-Bogoliubov variation of free Majoranas.
+    """
+    t = model.temperature
+    n = model.n_majorana
+    omega = entropy = 0.0
+    real_space = np.zeros((len(model.lattice_vectors), n * n), dtype=complex)
+    kept = []
+    for start in range(0, len(zone.k), CHUNK):
+        part = slice(start, start + CHUNK)
+        phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
+        e, u = np.linalg.eigh(bloch_matrix(model, phi, phases))
+        x = np.abs(e) / (2 * t)
+        log_cosh = x + np.log1p(np.exp(-2 * x))
+        tanh = np.tanh(e / (2 * t))
+        w = zone.weight[part]
+        omega -= t / 2 * float(w @ log_cosh.sum(axis=1))
+        entropy += float(w @ (log_cosh - x * np.abs(tanh)).sum(axis=1)) / 2
+        matrix = (u * tanh[:, None, :]) @ u.conj().swapaxes(1, 2)
+        real_space += (phases.conj() * w[:, None]).T @ matrix.reshape(-1, n * n)
+        if keep:
+            kept.append((part, e, u))
+    p = -real_space.reshape(-1, n, n).imag[model.position]
+    return Evaluation(omega, entropy, p, tuple(kept))
+
+
+def thermal_weight(e: Array, t: float) -> Array:
+    """X_nm = (tanh(e_n/2T) - tanh(e_m/2T))/(e_n - e_m), its limit (1 - tanh^2)/2T at equal energies; (..., n, n).
+
+    Written as sinh(d)/d * sech sech / 2T with d = (e_n - e_m)/2T, which loses no digits near degeneracy.
+    """
+    x = e / (2 * t)
+    d = np.abs(x[..., :, None] - x[..., None, :])
+    # ln sech of both, and ln(sinh d / d); exponentials are combined before they can overflow.
+    log_cosh = np.abs(x) + np.log1p(np.exp(-2 * np.abs(x))) - np.log(2)
+    small = d < 1e-4
+    safe = np.where(small, 1.0, d)
+    log_sinh = np.where(small, d * d / 6, safe + np.log(-np.expm1(-2 * safe)) - np.log(2 * safe))
+    return np.exp(log_sinh - log_cosh[..., :, None] - log_cosh[..., None, :]) / (2 * t)
+
+
+def response(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, channels: NDArray[np.int64]) -> Array:
+    """Pi_pq = dP_p/dphi_q among `channels`, (Nc, Nc), 1/meV; negative semidefinite. `state` must be kept.
+
+    Pi_pq = -(1/4) sum_k w_k sum_nm X_nm D^p_nm (D^q_nm)*, D^p = U+(2i|a><b|e^(ik.R) + h.c.)U.
+    Rows sqrt(wX) D are packed as real numbers over n <= m and multiplied in one symmetric product.
+    """
+    n = model.n_majorana
+    upper = np.triu_indices(n)
+    double = np.where(upper[0] == upper[1], 1.0, 2.0)
+    r, a, b = (axis[channels] for axis in model.position)
+    pi = np.zeros((len(channels), len(channels)))
+    step = max(1, 2**22 // (len(channels) * n * n))
+    for part, e, u in state.chunks:
+        for start in range(0, len(e), step):
+            block = slice(start, start + step)
+            k, w = zone.k[part][block], zone.weight[part][block]
+            phases = np.exp(2j * np.pi * (k @ model.lattice_vectors.T))[:, r]
+            rows = u[block]
+            left = rows[:, a].conj() * (2j * phases)[:, :, None]
+            # half_nm = 2i e^(ik.R) U*_an U_bm; D = half + half^dagger, needed for n <= m only.
+            half = left[:, :, upper[0]] * rows[:, b][:, :, upper[1]]
+            half += (left[:, :, upper[1]] * rows[:, b][:, :, upper[0]]).conj()
+            weight = np.sqrt(w[:, None] * (thermal_weight(e[block], model.temperature)[:, *upper] * double))
+            half *= weight[:, None, :]
+            packed = np.concatenate([half.real, half.imag], axis=2).swapaxes(0, 1).reshape(len(channels), -1)
+            pi -= packed @ packed.T / 4
+    return pi
+
+
+def constraint_response(model: MeanFieldModel, state: Evaluation, weight: Array) -> Array:
+    """C Pi C^T, (M, M): the response of the constrained quantities alone (they live on single sites). `state` kept."""
+    operators = np.zeros((len(model.c), model.n_majorana, model.n_majorana), dtype=complex)
+    for row, p in np.argwhere(model.c):
+        operators[row][model.table[p, 0], model.table[p, 1]] += 2j * model.c[row, p]
+    operators += operators.conj().swapaxes(1, 2)
+    total = np.zeros((len(model.c), len(model.c)))
+    for part, e, u in state.chunks:
+        x = np.sqrt(weight[part, None, None] * thermal_weight(e, model.temperature))
+        packed = []
+        for operator in operators:
+            support = np.flatnonzero(operator.any(axis=0))
+            rows = u[:, support]
+            d = x * (rows.conj().swapaxes(1, 2) @ (operator[np.ix_(support, support)] @ rows))
+            packed.append(d.reshape(-1).view(np.float64))
+        rows_ = np.array(packed)
+        total -= rows_ @ rows_.T / 4
+    return total

@@ -1,0 +1,124 @@
+"""A constrained mean-field problem and its points: fields whose multipliers have been solved."""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.meanfield.evaluate import Evaluation, constraint_response, evaluate
+from kondomf.meanfield.zone import ZoneRule
+from kondomf.model import MeanFieldModel
+
+Array = NDArray[np.float64]
+
+CONSTRAINT_TOLERANCE = 1e-10
+"""Largest allowed error of a constrained quantity. It enters F only in second order."""
+MAX_MULTIPLIER_EVALUATIONS = 250
+
+
+@dataclass
+class Problem:
+    """A model on a zone rule, and if a phase was chosen the basis (Na, d) of its class in the active channels.
+
+    `matrices` counts the Bloch matrices diagonalised so far.
+    """
+
+    model: MeanFieldModel
+    zone: ZoneRule
+    basis: Array | None = None
+    matrices: int = field(default=0, init=False)
+
+    def evaluate(self, phi: Array) -> Evaluation:
+        """Evaluation with kept eigen-decomposition, counted."""
+        self.matrices += len(self.zone.k)
+        return evaluate(self.model, self.zone, phi, keep=True)
+
+    def project(self, active_fields: Array) -> Array:
+        """Part of a vector over the active channels that lies in the class, (Na,)."""
+        return active_fields if self.basis is None else self.basis @ (self.basis.T @ active_fields)
+
+
+@dataclass(frozen=True)
+class Point:
+    """Fields that satisfy the constraints, with what follows from them; per magnetic cell, meV.
+
+    phi, residual : (N,); multipliers : (M,), -mu first; constraint_error : largest |C P - target|.
+    """
+
+    phi: Array
+    state: Evaluation
+    free_energy: float
+    residual: Array
+    multipliers: Array
+    constraint_error: float
+
+    @property
+    def p(self) -> Array:
+        return self.state.p
+
+    @property
+    def is_finite(self) -> bool:
+        return bool(np.isfinite(self.free_energy) and np.isfinite(self.residual).all())
+
+
+def point_at(problem: Problem, guess: Array) -> Point:
+    """Solve the multipliers starting from the fields `guess` (N,) and evaluate free energy and residual.
+
+    F = omega - phi.P + h.P + P.V.P/2 (PHYSICS: Gibbs-Bogoliubov). The residual is h + V P + C^T lambda - phi with
+    the multipliers lambda that make it smallest; a remaining constraint error is removed from F to first order.
+    """
+    model = problem.model
+    phi, state = _solve_multipliers(problem, guess)
+    bare = model.h + model.v @ state.p - phi
+    multipliers = np.linalg.lstsq(model.c.T, -bare, rcond=None)[0]
+    error = model.c @ state.p - model.target
+    free_energy = state.omega + (model.h - phi) @ state.p + state.p @ model.v @ state.p / 2 + multipliers @ error
+    residual = np.zeros_like(phi)
+    residual[model.active] = problem.project((bare + model.c.T @ multipliers)[model.active])
+    return Point(phi, state, float(free_energy), residual, multipliers, float(np.abs(error).max()))
+
+
+def _solve_multipliers(problem: Problem, phi: Array) -> tuple[Array, Evaluation]:
+    """Maximise the concave omega(phi + C^T lambda) - lambda.target by Newton steps with a bracketed line search.
+
+    The response of a constrained quantity vanishes at Dirac points, in gaps and on coarse grids at low T. There a
+    Newton step is cut to the largest coupling and the root of the directional derivative, which falls along
+    the line, is bracketed.
+    """
+    model = problem.model
+    state = problem.evaluate(phi)
+    budget = problem.matrices + MAX_MULTIPLIER_EVALUATIONS * len(problem.zone.k)
+    while problem.matrices < budget:
+        gradient = model.c @ state.p - model.target
+        if np.abs(gradient).max() <= CONSTRAINT_TOLERANCE or not np.isfinite(gradient).all():
+            break
+        m, q = np.linalg.eigh(-constraint_response(model, state, problem.zone.weight))
+        g = q.T @ gradient
+        step = q @ (g / np.maximum(m, np.abs(g) / model.scale + 1e-300))
+        phi, state = _line_search(problem, phi, model.c.T @ step, step, float(gradient @ step), budget)
+    return phi, state
+
+
+def _line_search(
+    problem: Problem, phi: Array, direction: Array, step: Array, slope: float, budget: int
+) -> tuple[Array, Evaluation]:
+    """Point along `direction` where the falling directional derivative has at most half its initial size."""
+    model = problem.model
+    low, slope_low, high, slope_high, s = 0.0, slope, np.inf, -slope, 1.0
+    while True:
+        trial = phi + s * direction
+        state = problem.evaluate(trial)
+        here = float((model.c @ state.p - model.target) @ step)
+        exhausted = problem.matrices >= budget or high - low < 1e-15 * s
+        if abs(here) <= 0.5 * slope or exhausted or not np.isfinite(here):
+            return trial, state
+        if here > 0:
+            low, slope_low = s, here
+        else:
+            high, slope_high = s, here
+        if np.isinf(high):
+            s *= 2
+        else:
+            # The secant through the bracket, kept away from its ends: a step-like derivative defeats it alone.
+            fraction = slope_low / (slope_low - slope_high)
+            s = low + (high - low) * float(np.clip(fraction, 0.1, 0.9))

@@ -1,0 +1,122 @@
+"""Steps that lower F: accelerated mixing while far away, trust-region Newton near and away from saddles.
+
+A step is a frozen settings record with `init` and `propose`; what it remembers between iterations is a separate
+record that the driver hands back. The driver alone accepts or rejects.
+"""
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.meanfield.curvature import Curvature, curvature_at
+from kondomf.meanfield.problem import Point, Problem
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class MixingMemory:
+    """Damping in use, and the last fields and residuals over the active channels."""
+
+    damping: float
+    history: tuple[tuple[Array, Array], ...] = ()
+
+
+@dataclass(frozen=True)
+class Mixing:
+    """Damped fixed-point iteration with Anderson acceleration; for small damping it descends in F.
+
+    Source: J. ACM 12, 547 (1965), "Iterative procedures for nonlinear integral equations".
+    """
+
+    damping: float = 0.7
+    depth: int = 4
+    name: str = "mixing"
+
+    def init(self) -> MixingMemory:
+        return MixingMemory(self.damping)
+
+    def propose(self, problem: Problem, point: Point, memory: MixingMemory) -> tuple[Array, MixingMemory]:
+        """Change of the active fields (Na,) and the memory to go with it."""
+        active = problem.model.active
+        x, r = point.phi[active], point.residual[active]
+        history = (*memory.history[-self.depth :], (x, r))
+        step = memory.damping * r
+        if len(history) > 1:
+            dx = np.array([x - old for old, _ in history[:-1]]).T
+            dr = np.array([r - old for _, old in history[:-1]]).T
+            gamma = np.linalg.lstsq(dr, r, rcond=1e-8)[0]
+            step = step - (dx + memory.damping * dr) @ gamma
+        return step, replace(memory, history=history)
+
+    def judge(self, memory: MixingMemory, accepted: bool, change: float) -> MixingMemory:
+        """After a rejection: forget the history and halve the damping."""
+        if accepted:
+            return replace(memory, damping=min(self.damping, 1.2 * memory.damping))
+        return MixingMemory(memory.damping / 2)
+
+
+@dataclass(frozen=True)
+class TrustMemory:
+    """Trust radius in the metric of the response (sqrt meV), curvature of the present point, predicted change of F."""
+
+    radius: float | None = None
+    curvature: Curvature | None = field(default=None, repr=False)
+    predicted: float = 0.0
+
+
+@dataclass(frozen=True)
+class TrustRegion:
+    """Trust-region Newton step (H + nu) y = -R^T r, dphi = (r + V R y)/(1 + nu), exact in the eigenbasis of H.
+
+    Turns into plain mixing where the response vanishes. In the hard case (gradient orthogonal to a direction of
+    negative curvature, as at a symmetric saddle) it follows that direction to the radius.
+    Source: SIAM J. Sci. Stat. Comput. 4, 553 (1983), "Computing a trust region step".
+    """
+
+    floor: float = 1e-10
+    name: str = "newton"
+
+    def init(self) -> TrustMemory:
+        return TrustMemory()
+
+    def propose(self, problem: Problem, point: Point, memory: TrustMemory) -> tuple[Array, TrustMemory]:
+        """Change of the active fields (Na,) and the memory to go with it."""
+        here = memory.curvature or curvature_at(problem, point)
+        radius = memory.radius or np.sqrt(0.1 * problem.model.scale)
+        r = point.residual[problem.model.active]
+        gradient = here.coordinates(r)
+        y, nu = trust_region_minimum(here.eigenvalues, gradient, radius, self.floor)
+        predicted = float(gradient @ y + here.eigenvalues @ y**2 / 2)
+        return here.fields(y, r, nu), TrustMemory(radius, here, predicted)
+
+    def judge(self, memory: TrustMemory, accepted: bool, change: float) -> TrustMemory:
+        """Shrink the radius after a poor prediction, widen it after a good one; a new point needs a new curvature."""
+        assert memory.radius is not None
+        quality = change / memory.predicted if memory.predicted < 0 else 1.0
+        factor = 0.25 if not accepted or quality < 0.25 else (2.0 if quality > 0.75 else 1.0)
+        return TrustMemory(memory.radius * factor, None if accepted else memory.curvature)
+
+
+def trust_region_minimum(eigenvalues: Array, gradient: Array, radius: float, floor: float) -> tuple[Array, float]:
+    """Minimise gradient.y + y.diag(eigenvalues).y/2 over |y| <= radius; returns y (d,) and the shift nu >= floor."""
+    if not len(eigenvalues):
+        return gradient, floor
+    lowest = float(eigenvalues.min())
+    nu = max(floor, floor - lowest)
+
+    def length(shift: float) -> float:
+        return float(np.linalg.norm(gradient / (eigenvalues + shift)))
+
+    if length(nu) > radius:
+        low, high = nu, nu + np.linalg.norm(gradient) / radius + abs(lowest)
+        while high - low > 1e-6 * high:
+            middle = np.sqrt(low * high)
+            low, high = (middle, high) if length(middle) > radius else (low, middle)
+        return -gradient / (eigenvalues + high), float(high)
+    y = -gradient / (eigenvalues + nu)
+    if lowest < -floor:
+        i = int(eigenvalues.argmin())
+        y[i] = np.sign(y[i] or 1.0) * np.sqrt(max(radius**2 - np.linalg.norm(np.delete(y, i)) ** 2, 0.0))
+    return y, nu
