@@ -1,1 +1,9 @@
 """Which Gaussian states are stationary, and are they minima? MeanFieldModel to Solution."""
+
+from kondomf.meanfield.driver import Settings
+from kondomf.meanfield.search import named_start, solve
+from kondomf.meanfield.solution import Solution
+from kondomf.meanfield.starts import Start
+from kondomf.meanfield.state import load_state, save_state
+
+__all__ = ["Settings", "Solution", "Start", "load_state", "named_start", "save_state", "solve"]

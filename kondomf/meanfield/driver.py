@@ -2,18 +2,20 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies
 from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, Point, Problem, point_at
-from kondomf.meanfield.steps import Mixing, TrustRegion
+from kondomf.meanfield.steps import Mixing, StationaryNewton, Step, TrustRegion
 
 Array = NDArray[np.float64]
 
 ROUNDING = 1e-11
 """Rounding error of F in units of the largest coupling; a rise within it is none."""
+MOST_CORRECTIONS = 2
 
 
 @dataclass(frozen=True)
@@ -24,7 +26,7 @@ class Settings:
     curvature : a lower curvature than minus this makes a saddle.
     decoupled : correlators between spinons and electrons below this count as none.
     mixing_steps, newton_steps : step limits of the two phases.
-    keep_saddle : stop at the first stationary point instead of leaving saddles downhill.
+    keep_saddle : go to the nearest stationary point, even a saddle, instead of always downhill.
     """
 
     residual: float = 1e-9
@@ -37,7 +39,10 @@ class Settings:
 
 @dataclass(frozen=True)
 class Descent:
-    """Where a start ended: point, status, why, its curvatures, and the history of (step, matrices, F, residual)."""
+    """Where a start ended: point, status, why, and the history of (step, matrices, F, residual).
+
+    curvature : at the point; curvature_min : its lowest, over all gauge copies when the point is decoupled.
+    """
 
     point: Point
     status: str
@@ -82,7 +87,9 @@ def descend(
     record("start", point)
     if not point.is_finite:
         return Descent(point, "not-converged", "the start has no finite free energy", None, None, tuple(history))
-    for step, limit in ((Mixing(), settings.mixing_steps), (TrustRegion(), settings.newton_steps)):
+    newton: Step = StationaryNewton() if settings.keep_saddle else TrustRegion()
+    phases: tuple[tuple[Step, int], ...] = ((Mixing(), settings.mixing_steps), (newton, settings.newton_steps))
+    for step, limit in phases:
         memory = step.init()
         for _ in range(limit):
             if is_stationary(point, scale, settings):
@@ -90,11 +97,11 @@ def descend(
                 if verdict.status == "minimum" or settings.keep_saddle:
                     return replace(verdict, history=tuple(history))
                 memory = step.init()
-                if not isinstance(step, TrustRegion):
+                if step is not newton:
                     break
             change, memory = step.propose(problem, point, memory)
-            trial = _moved(problem, point, change)
-            accepted = trial.is_finite and trial.free_energy <= point.free_energy + ROUNDING * scale
+            trial = _trial(problem, point, step, change, memory)
+            accepted = trial.is_finite and step.improves(point, trial, ROUNDING * scale)
             memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
             if accepted:
                 point = trial
@@ -109,14 +116,30 @@ def certify(problem: Problem, point: Point, settings: Settings) -> tuple[Descent
     The gauge copies of a decoupled state are the same physical state but see different uniform hybridizations, so
     its lowest curvature is the lowest over all of them.
     """
-    curvatures = [(point, curvature_at(problem, point))]
+    here = curvature_at(problem, point)
+    softest, lowest = point, here.lowest
     if is_decoupled(problem, point, settings):
-        curvatures += [(copy, curvature_at(problem, copy)) for copy in gauge_copies(problem, point)]
-    softest, curvature = min(curvatures, key=lambda pair: pair[1].lowest)
-    stable = curvature.lowest >= -settings.curvature
-    status = "minimum" if stable else "saddle"
-    message = "stationary; F falls in no direction" if stable else "stationary; there are directions in which F falls"
-    return Descent(point, status, message, curvature, curvature.lowest, ()), point if stable else softest
+        for copy in gauge_copies(problem, point):
+            curvature = curvature_at(problem, copy)
+            if curvature.lowest < lowest:
+                softest, lowest = copy, curvature.lowest
+    if lowest >= -settings.curvature:
+        return Descent(point, "minimum", "stationary; F falls in no direction", here, lowest, ()), point
+    return Descent(point, "saddle", "stationary; there are directions in which F falls", here, lowest, ()), softest
+
+
+def _trial(problem: Problem, point: Point, step: Step, change: Array, memory: Any) -> Point:
+    """Point at the proposed change, with the step's corrections while they lower F."""
+    trial = _moved(problem, point, change)
+    for _ in range(MOST_CORRECTIONS):
+        correction = step.correct(problem, trial, memory)
+        if correction is None or not trial.is_finite:
+            break
+        corrected = _moved(problem, trial, correction)
+        if not corrected.free_energy < trial.free_energy:
+            break
+        trial = corrected
+    return trial
 
 
 def _moved(problem: Problem, point: Point, change: Array) -> Point:

@@ -13,6 +13,8 @@ Complex = NDArray[np.complex128]
 
 CHUNK = 4096
 """Wave vectors worked on at a time; bounds the memory."""
+BLOCK = 2**17
+"""Numbers in one packed block of the response; fits the processor's cache."""
 
 
 @dataclass(frozen=True)
@@ -21,13 +23,15 @@ class Evaluation:
 
     omega : grand potential of H_MF per magnetic cell, meV.
     entropy : entropy per magnetic cell, in k_B.
-    p : (N,) correlators P_p = <i gamma_a(0) gamma_b(R)>.
+    p : (N,) correlators P_p = <i gamma_a(0) gamma_b(R)> of the channels.
+    correlators : (NR, n, n) the same for every pair of Majoranas, R running over the model's lattice vectors.
     chunks : eigenvalues (Nk, n) and eigenvectors (Nk, n, n) of h(k) with their slice of the zone; empty unless kept.
     """
 
     omega: float
     entropy: float
     p: Array
+    correlators: Array
     chunks: tuple[tuple[slice, Array, Complex], ...]
 
 
@@ -65,8 +69,8 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
         real_space += (phases.conj() * w[:, None]).T @ matrix.reshape(-1, n * n)
         if keep:
             kept.append((part, e, u))
-    p = -real_space.reshape(-1, n, n).imag[model.position]
-    return Evaluation(omega, entropy, p, tuple(kept))
+    correlators = -real_space.reshape(-1, n, n).imag
+    return Evaluation(omega, entropy, correlators[model.position], correlators, tuple(kept))
 
 
 def thermal_weight(e: Array, t: float) -> Array:
@@ -88,46 +92,23 @@ def response(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, channels:
     """Pi_pq = dP_p/dphi_q among `channels`, (Nc, Nc), 1/meV; negative semidefinite. `state` must be kept.
 
     Pi_pq = -(1/4) sum_k w_k sum_nm X_nm D^p_nm (D^q_nm)*, D^p = U+(2i|a><b|e^(ik.R) + h.c.)U.
-    Rows sqrt(wX) D are packed as real numbers over n <= m and multiplied in one symmetric product.
+    D is Hermitian and X symmetric, so Re D + Im D carries the whole sum in real numbers; with l_n = 2i e^(ik.R) U*_an
+    and r_m = U_bm it is the product of an (n, 4) and a (4, n) real matrix.
     """
-    n = model.n_majorana
-    upper = np.triu_indices(n)
-    double = np.where(upper[0] == upper[1], 1.0, 2.0)
-    r, a, b = (axis[channels] for axis in model.position)
-    pi = np.zeros((len(channels), len(channels)))
-    step = max(1, 2**22 // (len(channels) * n * n))
+    n, count = model.n_majorana, len(channels)
+    vector, a, b = (axis[channels] for axis in model.position)
+    pi = np.zeros((count, count))
+    step = max(1, BLOCK // (count * n * n))
     for part, e, u in state.chunks:
+        phases = 2j * np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
+        root = np.sqrt(zone.weight[part, None, None] * thermal_weight(e, model.temperature))
         for start in range(0, len(e), step):
             block = slice(start, start + step)
-            k, w = zone.k[part][block], zone.weight[part][block]
-            phases = np.exp(2j * np.pi * (k @ model.lattice_vectors.T))[:, r]
-            rows = u[block]
-            left = rows[:, a].conj() * (2j * phases)[:, :, None]
-            # half_nm = 2i e^(ik.R) U*_an U_bm; D = half + half^dagger, needed for n <= m only.
-            half = left[:, :, upper[0]] * rows[:, b][:, :, upper[1]]
-            half += (left[:, :, upper[1]] * rows[:, b][:, :, upper[0]]).conj()
-            weight = np.sqrt(w[:, None] * (thermal_weight(e[block], model.temperature)[:, *upper] * double))
-            half *= weight[:, None, :]
-            packed = np.concatenate([half.real, half.imag], axis=2).swapaxes(0, 1).reshape(len(channels), -1)
-            pi -= packed @ packed.T / 4
-    return pi
-
-
-def constraint_response(model: MeanFieldModel, state: Evaluation, weight: Array) -> Array:
-    """C Pi C^T, (M, M): the response of the constrained quantities alone (they live on single sites). `state` kept."""
-    operators = np.zeros((len(model.c), model.n_majorana, model.n_majorana), dtype=complex)
-    for row, p in np.argwhere(model.c):
-        operators[row][model.table[p, 0], model.table[p, 1]] += 2j * model.c[row, p]
-    operators += operators.conj().swapaxes(1, 2)
-    total = np.zeros((len(model.c), len(model.c)))
-    for part, e, u in state.chunks:
-        x = np.sqrt(weight[part, None, None] * thermal_weight(e, model.temperature))
-        packed = []
-        for operator in operators:
-            support = np.flatnonzero(operator.any(axis=0))
-            rows = u[:, support]
-            d = x * (rows.conj().swapaxes(1, 2) @ (operator[np.ix_(support, support)] @ rows))
-            packed.append(d.reshape(-1).view(np.float64))
-        rows_ = np.array(packed)
-        total -= rows_ @ rows_.T / 4
-    return total
+            left = (phases[block][:, vector, None] * u[block][:, a].conj()).swapaxes(0, 1)
+            right = u[block][:, b].swapaxes(0, 1)
+            plus, minus = right.real + right.imag, right.real - right.imag
+            columns = np.stack([left.real, left.imag, minus, -plus], axis=-1)
+            rows = np.stack([plus, minus, left.real, left.imag], axis=-2)
+            packed = ((columns @ rows) * root[block]).reshape(count, -1)
+            pi -= packed @ packed.T
+    return pi / 4

@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.meanfield.evaluate import Evaluation, constraint_response, evaluate
+from kondomf.meanfield.evaluate import Evaluation, evaluate, response
 from kondomf.meanfield.zone import ZoneRule
 from kondomf.model import MeanFieldModel
 
@@ -26,7 +26,7 @@ class Problem:
     model: MeanFieldModel
     zone: ZoneRule
     basis: Array | None = None
-    matrices: int = field(default=0, init=False)
+    matrices: int = field(default=0, init=False, compare=False)
 
     def evaluate(self, phi: Array) -> Evaluation:
         """Evaluation with kept eigen-decomposition, counted."""
@@ -70,7 +70,7 @@ def point_at(problem: Problem, guess: Array) -> Point:
     model = problem.model
     phi, state = _solve_multipliers(problem, guess)
     bare = model.h + model.v @ state.p - phi
-    multipliers = np.linalg.lstsq(model.c.T, -bare, rcond=None)[0]
+    multipliers: Array = np.linalg.lstsq(model.c.T, -bare, rcond=None)[0]
     error = model.c @ state.p - model.target
     free_energy = state.omega + (model.h - phi) @ state.p + state.p @ model.v @ state.p / 2 + multipliers @ error
     residual = np.zeros_like(phi)
@@ -86,13 +86,15 @@ def _solve_multipliers(problem: Problem, phi: Array) -> tuple[Array, Evaluation]
     the line, is bracketed.
     """
     model = problem.model
+    channels = model.constrained
+    c = model.c[:, channels]
     state = problem.evaluate(phi)
     budget = problem.matrices + MAX_MULTIPLIER_EVALUATIONS * len(problem.zone.k)
     while problem.matrices < budget:
         gradient = model.c @ state.p - model.target
         if np.abs(gradient).max() <= CONSTRAINT_TOLERANCE or not np.isfinite(gradient).all():
             break
-        m, q = np.linalg.eigh(-constraint_response(model, state, problem.zone.weight))
+        m, q = np.linalg.eigh(-c @ response(model, problem.zone, state, channels) @ c.T)
         g = q.T @ gradient
         step = q @ (g / np.maximum(m, np.abs(g) / model.scale + 1e-300))
         phi, state = _line_search(problem, phi, model.c.T @ step, step, float(gradient @ step), budget)

@@ -77,24 +77,35 @@ def noise(model: MeanFieldModel, rng: np.random.Generator, size: float) -> Array
     return p
 
 
-def starts(model: MeanFieldModel, count: int, seed: int, *, hybridized_only: bool = False) -> Iterator[Start]:
-    """The first `count` starts: decoupled, hybridized and magnetic states in turn, then random ones.
+def standard_starts(model: MeanFieldModel) -> dict[str, Start]:
+    """The starts by name: hybridized and decoupled spin liquids of every gauge copy, and magnets."""
+    diagonal, z = np.ones(3) / np.sqrt(3), np.array([0.0, 0.0, 1.0])
+    states = {}
+    for copy, shift in enumerate(COPIES):
+        states[f"decoupled {shift}"] = spin_liquid(model, copy)
+        states[f"hybridized {shift}"] = spin_liquid(model, copy) + hybridization(model, 0.7)
+        if copy == 0:
+            states["antiferromagnet 111"] = magnet(model, diagonal, staggered=True)
+            states["ferromagnet z"] = magnet(model, z, staggered=False)
+    return {name: Start(name, p) for name, p in states.items()}
 
-    All but the exactly symmetric decoupled start carry a small seeded noise, so that none sits on a symmetric saddle.
+
+def starts(model: MeanFieldModel, count: int, seed: int, *, hybridized_only: bool = False) -> Iterator[Start]:
+    """The first `count` starts of a search: the standard ones in turn, then random ones.
+
+    A decoupled state is started once, since its certificate covers all its gauge copies. The other standard starts
+    carry a small seeded noise, so that none sits on a symmetric saddle.
     """
     rng = np.random.default_rng(seed)
-    known = [("decoupled 0", spin_liquid(model, 0))] if not hybridized_only else []
-    known += [("hybridized 0", spin_liquid(model, 0) + hybridization(model, 0.7))]
-    if not hybridized_only:
-        diagonal, z = np.ones(3) / np.sqrt(3), np.array([0.0, 0.0, 1.0])
-        known += [("antiferromagnet 111", magnet(model, diagonal, True)), ("ferromagnet z", magnet(model, z, False))]
-    known += [
-        (f"hybridized {COPIES[copy]}", spin_liquid(model, copy) + hybridization(model, 0.7)) for copy in (1, 2, 3)
+    known = [
+        start
+        for name, start in standard_starts(model).items()
+        if name.startswith("hybridized") or (not hybridized_only and name not in [f"decoupled {m}" for m in COPIES[1:]])
     ]
     for index in range(count):
         if index < len(known):
-            name, p = known[index]
-            yield Start(name, p if name == "decoupled 0" else p + noise(model, rng, 0.02))
+            name, p = known[index].name, known[index].p
+            yield Start(name, p if name.startswith("decoupled") else p + noise(model, rng, 0.02))
         else:
             yield Start(f"random {index - len(known) + 1}", noise(model, rng, 0.5))
 

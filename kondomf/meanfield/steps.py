@@ -5,6 +5,7 @@ record that the driver hands back. The driver alone accepts or rejects.
 """
 
 from dataclasses import dataclass, field, replace
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,18 @@ from kondomf.meanfield.curvature import Curvature, curvature_at
 from kondomf.meanfield.problem import Point, Problem
 
 Array = NDArray[np.float64]
+
+
+class Step(Protocol):
+    """What the driver needs of a step; `memory` is the step's own record."""
+
+    @property
+    def name(self) -> str: ...
+    def init(self) -> Any: ...
+    def propose(self, problem: Problem, point: Point, memory: Any) -> tuple[Array, Any]: ...
+    def correct(self, problem: Problem, trial: Point, memory: Any) -> Array | None: ...
+    def improves(self, before: Point, after: Point, rounding: float) -> bool: ...
+    def judge(self, memory: Any, accepted: bool, change: float) -> Any: ...
 
 
 @dataclass(frozen=True)
@@ -50,6 +63,14 @@ class Mixing:
             step = step - (dx + memory.damping * dr) @ gamma
         return step, replace(memory, history=history)
 
+    def correct(self, problem: Problem, trial: Point, memory: MixingMemory) -> Array | None:
+        """Mixing tries one change a step."""
+        return None
+
+    def improves(self, before: Point, after: Point, rounding: float) -> bool:
+        """F must not rise."""
+        return after.free_energy <= before.free_energy + rounding
+
     def judge(self, memory: MixingMemory, accepted: bool, change: float) -> MixingMemory:
         """After a rejection: forget the history and halve the damping."""
         if accepted:
@@ -76,6 +97,7 @@ class TrustRegion:
     """
 
     floor: float = 1e-10
+    stiff: float = 0.03
     name: str = "newton"
 
     def init(self) -> TrustMemory:
@@ -84,12 +106,31 @@ class TrustRegion:
     def propose(self, problem: Problem, point: Point, memory: TrustMemory) -> tuple[Array, TrustMemory]:
         """Change of the active fields (Na,) and the memory to go with it."""
         here = memory.curvature or curvature_at(problem, point)
-        radius = memory.radius or np.sqrt(0.1 * problem.model.scale)
+        radius = memory.radius or float(np.sqrt(0.1 * problem.model.scale))
         r = point.residual[problem.model.active]
         gradient = here.coordinates(r)
         y, nu = trust_region_minimum(here.eigenvalues, gradient, radius, self.floor)
         predicted = float(gradient @ y + here.eigenvalues @ y**2 / 2)
         return here.fields(y, r, nu), TrustMemory(radius, here, predicted)
+
+    def correct(self, problem: Problem, trial: Point, memory: TrustMemory) -> Array | None:
+        """Change that takes `trial` back to the floor of a curved valley: a Newton step in the stiff modes alone.
+
+        Soft modes (|K| << t: rotations of the hybridization) run along curved valleys. Without this the
+        stiff modes, excited in second order, would hold the radius down.
+        """
+        assert memory.curvature is not None
+        eigenvalues = memory.curvature.eigenvalues
+        r = trial.residual[problem.model.active]
+        gradient = memory.curvature.coordinates(r)
+        stiff = eigenvalues > self.stiff
+        # y = g/(1 - e) makes Curvature.fields leave a soft mode where it is.
+        y = gradient / np.where(stiff, -eigenvalues, 1 - eigenvalues)
+        return memory.curvature.fields(y, r, 0.0)
+
+    def improves(self, before: Point, after: Point, rounding: float) -> bool:
+        """F must not rise."""
+        return after.free_energy <= before.free_energy + rounding
 
     def judge(self, memory: TrustMemory, accepted: bool, change: float) -> TrustMemory:
         """Shrink the radius after a poor prediction, widen it after a good one; a new point needs a new curvature."""
@@ -97,6 +138,42 @@ class TrustRegion:
         quality = change / memory.predicted if memory.predicted < 0 else 1.0
         factor = 0.25 if not accepted or quality < 0.25 else (2.0 if quality > 0.75 else 1.0)
         return TrustMemory(memory.radius * factor, None if accepted else memory.curvature)
+
+
+@dataclass(frozen=True)
+class StationaryNewton:
+    """Newton step H y = -R^T r to the nearest stationary point, minimum or saddle; the residual must fall.
+
+    For the study of a given start only: this is how a symmetric saddle is kept for inspection.
+    """
+
+    floor: float = 1e-10
+    name: str = "stationary newton"
+
+    def init(self) -> TrustMemory:
+        return TrustMemory()
+
+    def propose(self, problem: Problem, point: Point, memory: TrustMemory) -> tuple[Array, TrustMemory]:
+        """Change of the active fields (Na,) and the memory to go with it."""
+        here = memory.curvature or curvature_at(problem, point)
+        damping = memory.radius or 1.0
+        r = point.residual[problem.model.active]
+        slope = np.where(np.abs(here.eigenvalues) < self.floor, np.inf, here.eigenvalues)
+        y = -here.coordinates(r) / slope
+        return damping * here.fields(y, r, 0.0), TrustMemory(damping, here)
+
+    def correct(self, problem: Problem, trial: Point, memory: TrustMemory) -> Array | None:
+        """A stationary point is sought by plain Newton steps."""
+        return None
+
+    def improves(self, before: Point, after: Point, rounding: float) -> bool:
+        """The norm of the residual must fall."""
+        return bool(np.linalg.norm(after.residual) < np.linalg.norm(before.residual))
+
+    def judge(self, memory: TrustMemory, accepted: bool, change: float) -> TrustMemory:
+        """Halve the step after a rejection, else return towards the full step."""
+        assert memory.radius is not None
+        return TrustMemory(min(1.0, 2 * memory.radius)) if accepted else replace(memory, radius=memory.radius / 2)
 
 
 def trust_region_minimum(eigenvalues: Array, gradient: Array, radius: float, floor: float) -> tuple[Array, float]:
@@ -110,13 +187,13 @@ def trust_region_minimum(eigenvalues: Array, gradient: Array, radius: float, flo
         return float(np.linalg.norm(gradient / (eigenvalues + shift)))
 
     if length(nu) > radius:
-        low, high = nu, nu + np.linalg.norm(gradient) / radius + abs(lowest)
+        low, high = nu, nu + float(np.linalg.norm(gradient)) / radius + abs(lowest)
         while high - low > 1e-6 * high:
-            middle = np.sqrt(low * high)
+            middle = float(np.sqrt(low * high))
             low, high = (middle, high) if length(middle) > radius else (low, middle)
         return -gradient / (eigenvalues + high), float(high)
     y = -gradient / (eigenvalues + nu)
     if lowest < -floor:
         i = int(eigenvalues.argmin())
-        y[i] = np.sign(y[i] or 1.0) * np.sqrt(max(radius**2 - np.linalg.norm(np.delete(y, i)) ** 2, 0.0))
+        y[i] = np.copysign(1.0, y[i]) * np.sqrt(max(radius**2 - np.linalg.norm(np.delete(y, i)) ** 2, 0.0))
     return y, nu

@@ -1,5 +1,7 @@
 """Builds the mean-field model of a material. A new coupling is a few lines here and nothing elsewhere."""
 
+from itertools import combinations
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -119,7 +121,7 @@ def _add_conduction(terms: Terms, cell: MagneticCell, material: Material) -> Non
     for site in range(cell.n_sites):
         offset = layer.sublattice_offset_meV / 2 * (1 if site % 2 == 0 else -1)
         coefficients = hopping_coefficients(offset * np.eye(2), site % 2, site % 2)
-        for mu, nu in zip(*np.triu_indices(4, 1), strict=True):
+        for mu, nu in combinations(range(4), 2):
             first, second = majorana(site, ELECTRON, mu), majorana(site, ELECTRON, nu)
             terms.add_one_body(float(coefficients[mu, nu]), (first, HERE), (second, HERE))
 

@@ -41,7 +41,7 @@ DENSITY: Bilinear = [(0.5, 0, 3), (0.5, 1, 2)]
 _SPINOR = 0.5 * np.array([[1, 0, 0, 1j], [0, 1j, -1, 0]])
 
 
-def spinor(sublattice: int) -> NDArray[np.complex128]:
+def spinor(sublattice: int) -> NDArray:
     """Rows c_up, c_down of a site as combinations of its four Majoranas, shape (2, 4)."""
     return _SPINOR * (1j if sublattice else 1.0)
 

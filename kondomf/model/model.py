@@ -62,6 +62,11 @@ class MeanFieldModel:
         return np.flatnonzero(self.v.any(axis=1) | self.c.any(axis=0))
 
     @cached_property
+    def constrained(self) -> NDArray[np.int64]:
+        """Channels that enter a constraint."""
+        return np.flatnonzero(self.c.any(axis=0))
+
+    @cached_property
     def species(self) -> NDArray[np.int64]:
         """Species (0 spinon, 1 electron) of both Majoranas of every channel, (N, 2)."""
         return (self.table[:, :2] % PER_SITE) // 4
