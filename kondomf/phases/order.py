@@ -1,0 +1,124 @@
+"""Order parameters that do not depend on the gauge, from the correlators of a solution."""
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.material import material_from_dict
+from kondomf.meanfield import Solution
+from kondomf.model.build import exchange_matrix
+from kondomf.model.lattice import FIRST
+from kondomf.model.majorana import ELECTRON, SPINON, majorana, spin, spinor
+
+Array = NDArray[np.float64]
+HERE = (0, 0)
+SINGLET = np.array([[0, 1], [-1, 0]])
+"""i sigma_y."""
+TRIPLET = np.array([[[-1, 0], [0, 1]], [[1j, 0], [0, 1j]], [[0, 1], [1, 0]]])
+"""sigma_a i sigma_y for a = x, y, z."""
+
+
+@dataclass(frozen=True)
+class Order:
+    """Order parameters of one solution; every property is computed when asked for."""
+
+    solution: Solution
+
+    def block(self, one: tuple[int, int], other: tuple[int, int], r: tuple[int, int] = HERE) -> Array:
+        """<i gamma^mu gamma^nu> between (site, species) at 0 and (site, species) at R, shape (4, 4)."""
+        model = self.solution.model
+        index = int(np.flatnonzero((model.lattice_vectors == r).all(axis=1))[0])
+        a, b = majorana(*one, 0), majorana(*other, 0)
+        return self.solution.correlators[index, a : a + 4, b : b + 4]
+
+    @property
+    def sites(self) -> range:
+        return range(self.solution.model.cell.n_sites)
+
+    @cached_property
+    def hybridization(self) -> Array:
+        """Singular values of W = <i chi^mu eta^nu> of every site, descending, shape (sites, 4), between 0 and 1."""
+        return np.array([np.linalg.svd(self.block((i, SPINON), (i, ELECTRON)), compute_uv=False) for i in self.sites])
+
+    @cached_property
+    def spin_moment(self) -> Array:
+        """<S> of every site along the spin axes, (sites, 3), in units of hbar."""
+        return self._moments(SPINON)
+
+    @cached_property
+    def electron_moment(self) -> Array:
+        """<s> of the conduction electrons of every site, (sites, 3), in units of hbar."""
+        return self._moments(ELECTRON)
+
+    def _moments(self, species: int) -> Array:
+        blocks = [self.block((i, species), (i, species)) for i in self.sites]
+        return np.array([[sum(x * g[mu, nu] for x, mu, nu in s) for s in spin("so4")] for g in blocks])
+
+    @cached_property
+    def density(self) -> Array:
+        """Conduction electrons of every site, (sites,)."""
+        blocks = [self.block((i, ELECTRON), (i, ELECTRON)) for i in self.sites]
+        return np.array([1 + (g[0, 3] + g[1, 2]) / 2 for g in blocks])
+
+    @cached_property
+    def bonds(self) -> list[tuple[int, int, tuple[int, int], int]]:
+        """First-neighbour bonds (site i, site j, R, type)."""
+        return self.solution.model.cell.bonds(FIRST)
+
+    @cached_property
+    def bond_energies(self) -> dict[str, list[float]]:
+        """Exchange energy <S_i M S_j> of every first-neighbour bond in meV, by bond type."""
+        material = material_from_dict(self.solution.inputs)
+        layer, form = material.spin_layer, spin(material.mean_field.exchange_form)
+        result: dict[str, list[float]] = {"x": [], "y": [], "z": []}
+        for i, j, r, kind in self.bonds:
+            m = exchange_matrix(
+                kind, layer.heisenberg_meV, layer.kitaev_meV[kind], layer.gamma_meV, layer.gamma_prime_meV
+            )
+            result["xyz"[kind]].append(self._spin_product(m, form, i, j, r, material.mean_field.magnetic_channel))
+        return result
+
+    def _spin_product(self, m: Array, form: list, i: int, j: int, r: tuple[int, int], magnetic: bool) -> float:
+        """Wick sum of S_i M S_j, without its first product when the magnetic channel is off."""
+        here, there = self.block((i, SPINON), (i, SPINON)), self.block((j, SPINON), (j, SPINON))
+        across = self.block((i, SPINON), (j, SPINON), r)
+        total = 0.0
+        for alpha, beta in np.argwhere(m):
+            for x, a, b in form[alpha]:
+                for y, c, d in form[beta]:
+                    wick = across[a, d] * across[b, c] - across[a, c] * across[b, d]
+                    total += m[alpha, beta] * x * y * (wick + magnetic * here[a, b] * there[c, d])
+        return float(total)
+
+    @cached_property
+    def pairing(self) -> tuple[float, float]:
+        """Largest |psi| and |d| of <c c> = (psi + d.sigma) i sigma_y over sites and first-neighbour bonds."""
+        pairs = [(i, i, HERE) for i in self.sites] + [(i, j, r) for i, j, r, _ in self.bonds]
+        singlet = triplet = 0.0
+        for i, j, r in pairs:
+            amplitude = self._electron_pairs(i, j, r)
+            singlet = max(singlet, float(abs(np.sum(SINGLET * amplitude)) / 2))
+            d = [np.sum(t.conj() * amplitude) / 2 for t in TRIPLET]
+            triplet = max(triplet, float(np.linalg.norm(d)))
+        return singlet, triplet
+
+    def _electron_pairs(self, i: int, j: int, r: tuple[int, int]) -> NDArray:
+        """<c_i sigma c_j sigma'>, (2, 2); <eta eta> = delta - i <i eta eta>, and the delta drops out of <c c>."""
+        return spinor(i % 2) @ (-1j * self.block((i, ELECTRON), (j, ELECTRON), r)) @ spinor(j % 2).T
+
+    @cached_property
+    def normal_amplitude(self) -> float:
+        """Largest |<c+ c>| on a first-neighbour bond, the measure for pairing."""
+        sizes = []
+        for i, j, r, _ in self.bonds:
+            block = -1j * self.block((i, ELECTRON), (j, ELECTRON), r)
+            sizes.append(np.abs(spinor(i % 2).conj() @ block @ spinor(j % 2).T).max())
+        return float(max(sizes))
+
+    @cached_property
+    def nematicity(self) -> float:
+        """Spread of the bond energies between the bond types over their sum, 0 when C3 is kept by isotropic bonds."""
+        means = np.array([np.mean(energies) for energies in self.bond_energies.values()])
+        return float(np.ptp(means) / max(np.abs(means).sum(), 1e-12))

@@ -1,0 +1,63 @@
+"""Everything that is known of a solution, as plain numbers and words."""
+
+from typing import Any
+
+import numpy as np
+
+import kondomf
+from kondomf.meanfield import Solution
+from kondomf.phases.labels import label
+from kondomf.phases.order import Order
+from kondomf.phases.spectrum import gap
+
+
+def summarize(solution: Solution) -> dict[str, Any]:
+    """The machine-readable description of a solution, ready for JSON; keys carry their unit."""
+    order, spectrum = Order(solution), gap(solution)
+    name = label(solution, order, spectrum)
+    zero = solution.zero_modes
+    singlet, triplet = order.pairing
+    return {
+        "phase": name.name,
+        "phase_evidence": list(name.evidence),
+        "status": solution.status,
+        "message": solution.message,
+        "free_energy_meV_per_cell": solution.free_energy_meV_per_cell,
+        "entropy_kB_per_cell": solution.entropy_kB_per_cell,
+        "filling": solution.filling,
+        "chemical_potential_meV": solution.chemical_potential_meV,
+        "multipliers_meV": dict(zip(solution.model.constraint_names, solution.multipliers.tolist(), strict=True)),
+        "residual_meV": solution.residual_meV,
+        "constraint_error": solution.constraint_error,
+        "curvature_min": solution.curvature_min,
+        "curvature_full_space": solution.curvature_full_space,
+        "curvatures": list(solution.curvatures),
+        "zero_modes": None
+        if zero is None
+        else {
+            "count": zero.count,
+            "broken_generators": zero.broken_generators,
+            "gauge_directions": zero.gauge,
+            "unexplained": zero.unexplained,
+        },
+        "hybridization_singular_values": order.hybridization.tolist(),
+        "spin_moment": order.spin_moment.tolist(),
+        "electron_moment": order.electron_moment.tolist(),
+        "density": order.density.tolist(),
+        "bond_energies_meV": order.bond_energies,
+        "nematicity": order.nematicity,
+        "pairing": {"singlet": singlet, "triplet": triplet, "normal": order.normal_amplitude},
+        "gap_meV": spectrum.total,
+        "gap_electrons_meV": spectrum.electrons,
+        "gap_spinons_meV": spectrum.spinons,
+        "chern_number": None,
+        "chern_number_reason": "not evaluated by this version",
+        "zone_error_meV": solution.zone_error_meV,
+        "phase_class": solution.phase_class,
+        "start": solution.start,
+        "trials": [vars(trial) for trial in solution.trials],
+        "evaluations": solution.evaluations,
+        "wall_seconds": solution.wall_seconds,
+        "inputs": solution.inputs,
+        "versions": {"kondomf": kondomf.__version__, "numpy": np.__version__},
+    }
