@@ -3,7 +3,7 @@
 from kondomf.meanfield.driver import Settings
 from kondomf.meanfield.search import named_start, solve
 from kondomf.meanfield.solution import Solution
-from kondomf.meanfield.starts import Start
+from kondomf.meanfield.starts import Start, carried_over
 from kondomf.meanfield.state import load_state, save_state
 
-__all__ = ["Settings", "Solution", "Start", "load_state", "named_start", "save_state", "solve"]
+__all__ = ["Settings", "Solution", "Start", "carried_over", "load_state", "named_start", "save_state", "solve"]

@@ -28,6 +28,17 @@ class Start:
         return model.h + model.v @ self.p
 
 
+def carried_over(model: MeanFieldModel, name: str, table: NDArray[np.int64], p: Array) -> Start:
+    """Start from the correlators p (N',) of another model of the same cell, given its channel table (N', 4).
+
+    Channels that only one of the models holds (a coupling that vanishes in the other) are dropped or start at zero.
+    """
+    start = np.zeros(model.n_channels)
+    for (a, b, r1, r2), value in zip(table.tolist(), p, strict=True):
+        _set(model, start, a, b, (r1, r2), value)
+    return Start(name, start)
+
+
 def spin_liquid(model: MeanFieldModel, copy: int = 0) -> Array:
     """Correlators of the decoupled spin liquid in one of its four gauge copies, and of hopping electrons."""
     p = np.zeros(model.n_channels)
@@ -112,6 +123,6 @@ def starts(model: MeanFieldModel, count: int, seed: int, *, hybridized_only: boo
 
 def _set(model: MeanFieldModel, p: Array, a: int, b: int, r: tuple[int, int], value: float) -> None:
     """Set <i gamma_a(0) gamma_b(R)> where the model has that channel."""
-    found = model.find(a, b, r)
+    found = model.find(a, b, r) if max(a, b) < model.n_majorana else None
     if found is not None:
         p[found[0]] = found[1] * value

@@ -195,5 +195,6 @@ def trust_region_minimum(eigenvalues: Array, gradient: Array, radius: float, flo
     y = -gradient / (eigenvalues + nu)
     if lowest < -floor:
         i = int(eigenvalues.argmin())
-        y[i] = np.copysign(1.0, y[i]) * np.sqrt(max(radius**2 - np.linalg.norm(np.delete(y, i)) ** 2, 0.0))
+        rest = float(np.linalg.norm(np.delete(y, i)))
+        y[i] = np.copysign(np.sqrt(max(radius**2 - rest**2, 0.0)), y[i])
     return y, nu
