@@ -89,14 +89,15 @@ def descend(
         return Descent(point, "not-converged", "the start has no finite free energy", None, None, tuple(history))
     newton: Step = StationaryNewton() if settings.keep_saddle else TrustRegion()
     phases: tuple[tuple[Step, int], ...] = ((Mixing(), settings.mixing_steps), (newton, settings.newton_steps))
+    left_saddle = None
     for step, limit in phases:
         memory = step.init()
         for _ in range(limit):
-            if is_stationary(point, scale, settings):
+            if point is not left_saddle and is_stationary(point, scale, settings):
                 verdict, point = certify(problem, point, settings)
                 if verdict.status == "minimum" or settings.keep_saddle:
                     return replace(verdict, history=tuple(history))
-                memory = step.init()
+                left_saddle, memory = point, step.init()
                 if step is not newton:
                     break
             change, memory = step.propose(problem, point, memory)
@@ -130,19 +131,23 @@ def certify(problem: Problem, point: Point, settings: Settings) -> tuple[Descent
 
 def _trial(problem: Problem, point: Point, step: Step, change: Array, memory: Any) -> Point:
     """Point at the proposed change, with the step's corrections while they lower F."""
-    trial = _moved(problem, point, change)
+    # A change leaves constraint errors of second order; solving them much better than that is waste on the way, since
+    # F is right to first order in them.
+    size = float(np.abs(change).max(initial=0.0)) / problem.model.scale
+    tolerance = float(np.clip(size**2, CONSTRAINT_TOLERANCE, 1e-6))
+    trial = _moved(problem, point, change, tolerance)
     for _ in range(MOST_CORRECTIONS):
-        correction = step.correct(problem, trial, memory)
-        if correction is None or not trial.is_finite:
+        correction = step.correct(problem, point, trial, memory) if trial.is_finite else None
+        if correction is None:
             break
-        corrected = _moved(problem, trial, correction)
+        corrected = _moved(problem, trial, correction, tolerance)
         if not corrected.free_energy < trial.free_energy:
             break
         trial = corrected
     return trial
 
 
-def _moved(problem: Problem, point: Point, change: Array) -> Point:
+def _moved(problem: Problem, point: Point, change: Array, tolerance: float) -> Point:
     fields = point.phi.copy()
     fields[problem.model.active] += problem.project(change)
-    return point_at(problem, fields)
+    return point_at(problem, fields, tolerance)

@@ -12,7 +12,7 @@ from kondomf.model import MeanFieldModel
 Array = NDArray[np.float64]
 
 CONSTRAINT_TOLERANCE = 1e-10
-"""Largest allowed error of a constrained quantity. It enters F only in second order."""
+"""Largest allowed error of a constrained quantity in a solution. It enters F only in second order."""
 MAX_MULTIPLIER_EVALUATIONS = 250
 
 
@@ -61,14 +61,15 @@ class Point:
         return bool(np.isfinite(self.free_energy) and np.isfinite(self.residual).all())
 
 
-def point_at(problem: Problem, guess: Array) -> Point:
+def point_at(problem: Problem, guess: Array, tolerance: float = CONSTRAINT_TOLERANCE) -> Point:
     """Solve the multipliers starting from the fields `guess` (N,) and evaluate free energy and residual.
 
     F = omega - phi.P + h.P + P.V.P/2 (PHYSICS: Gibbs-Bogoliubov). The residual is h + V P + C^T lambda - phi with
-    the multipliers lambda that make it smallest; a remaining constraint error is removed from F to first order.
+    the multipliers lambda that make it smallest; a remaining constraint error, up to `tolerance`, is removed from F
+    to first order.
     """
     model = problem.model
-    phi, state = _solve_multipliers(problem, guess)
+    phi, state = _solve_multipliers(problem, guess, tolerance)
     bare = model.h + model.v @ state.p - phi
     multipliers: Array = np.linalg.lstsq(model.c.T, -bare, rcond=None)[0]
     error = model.c @ state.p - model.target
@@ -78,7 +79,7 @@ def point_at(problem: Problem, guess: Array) -> Point:
     return Point(phi, state, float(free_energy), residual, multipliers, float(np.abs(error).max()))
 
 
-def _solve_multipliers(problem: Problem, phi: Array) -> tuple[Array, Evaluation]:
+def _solve_multipliers(problem: Problem, phi: Array, tolerance: float) -> tuple[Array, Evaluation]:
     """Maximise the concave omega(phi + C^T lambda) - lambda.target by Newton steps with a bracketed line search.
 
     The response of a constrained quantity vanishes at Dirac points, in gaps and on coarse grids at low T. There a
@@ -92,7 +93,7 @@ def _solve_multipliers(problem: Problem, phi: Array) -> tuple[Array, Evaluation]
     budget = problem.matrices + MAX_MULTIPLIER_EVALUATIONS * len(problem.zone.k)
     while problem.matrices < budget:
         gradient = model.c @ state.p - model.target
-        if np.abs(gradient).max() <= CONSTRAINT_TOLERANCE or not np.isfinite(gradient).all():
+        if np.abs(gradient).max() <= tolerance or not np.isfinite(gradient).all():
             break
         m, q = np.linalg.eigh(-c @ response(model, problem.zone, state, channels) @ c.T)
         g = q.T @ gradient

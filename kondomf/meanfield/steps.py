@@ -23,7 +23,7 @@ class Step(Protocol):
     def name(self) -> str: ...
     def init(self) -> Any: ...
     def propose(self, problem: Problem, point: Point, memory: Any) -> tuple[Array, Any]: ...
-    def correct(self, problem: Problem, trial: Point, memory: Any) -> Array | None: ...
+    def correct(self, problem: Problem, point: Point, trial: Point, memory: Any) -> Array | None: ...
     def improves(self, before: Point, after: Point, rounding: float) -> bool: ...
     def judge(self, memory: Any, accepted: bool, change: float) -> Any: ...
 
@@ -63,7 +63,7 @@ class Mixing:
             step = step - (dx + memory.damping * dr) @ gamma
         return step, replace(memory, history=history)
 
-    def correct(self, problem: Problem, trial: Point, memory: MixingMemory) -> Array | None:
+    def correct(self, problem: Problem, point: Point, trial: Point, memory: MixingMemory) -> Array | None:
         """Mixing tries one change a step."""
         return None
 
@@ -113,13 +113,16 @@ class TrustRegion:
         predicted = float(gradient @ y + here.eigenvalues @ y**2 / 2)
         return here.fields(y, r, nu), TrustMemory(radius, here, predicted)
 
-    def correct(self, problem: Problem, trial: Point, memory: TrustMemory) -> Array | None:
+    def correct(self, problem: Problem, point: Point, trial: Point, memory: TrustMemory) -> Array | None:
         """Change that takes `trial` back to the floor of a curved valley: a Newton step in the stiff modes alone.
 
+        None where F fell as predicted.
         Soft modes (|K| << t: rotations of the hybridization) run along curved valleys. Without this the
         stiff modes, excited in second order, would hold the radius down.
         """
         assert memory.curvature is not None
+        if trial.free_energy - point.free_energy < 0.9 * memory.predicted:
+            return None
         eigenvalues = memory.curvature.eigenvalues
         r = trial.residual[problem.model.active]
         gradient = memory.curvature.coordinates(r)
@@ -136,7 +139,7 @@ class TrustRegion:
         """Shrink the radius after a poor prediction, widen it after a good one; a new point needs a new curvature."""
         assert memory.radius is not None
         quality = change / memory.predicted if memory.predicted < 0 else 1.0
-        factor = 0.25 if not accepted or quality < 0.25 else (2.0 if quality > 0.75 else 1.0)
+        factor = 0.4 if not accepted or quality < 0.25 else (1.6 if quality > 0.8 else 1.0)
         return TrustMemory(memory.radius * factor, None if accepted else memory.curvature)
 
 
@@ -162,7 +165,7 @@ class StationaryNewton:
         y = -here.coordinates(r) / slope
         return damping * here.fields(y, r, 0.0), TrustMemory(damping, here)
 
-    def correct(self, problem: Problem, trial: Point, memory: TrustMemory) -> Array | None:
+    def correct(self, problem: Problem, point: Point, trial: Point, memory: TrustMemory) -> Array | None:
         """A stationary point is sought by plain Newton steps."""
         return None
 

@@ -78,9 +78,9 @@ class Gap:
 
 
 def gap(solution: Solution, points: int = 36) -> Gap:
-    """Gap of the quasiparticles, on a grid that holds Γ, M and K and then by a simplex search from its lowest places."""
+    """Gap on a grid that holds Γ, M and K, then by a simplex search from its lowest places."""
     model = solution.model
-    if np.abs(solution.phi[model.hybridization]).max(initial=0.0) > 1e-9 * model.scale:
+    if np.abs(solution.p[model.hybridization]).max(initial=0.0) > 1e-6:
         total = _smallest(solution, np.arange(model.n_majorana), points)
         return Gap(total, total, total)
     electron = np.arange(model.n_majorana) % PER_SITE >= 4

@@ -1,0 +1,343 @@
+"""The commands: each parses its arguments, calls one function, prints. Heavy imports wait until a command runs."""
+
+import json
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from kondomf.errors import InputError
+from kondomf.files import refuse_existing, write_atomically
+
+if TYPE_CHECKING:
+    from kondomf.effective import FourBandModel
+
+EXIT_NUMERICS, EXIT_INPUT, EXIT_INTERRUPTED = 1, 2, 130
+
+FilePath = click.Path(path_type=Path)
+
+
+def outputs(*names: str) -> Callable[[Any], Any]:
+    """Add the output options that a command offers, out of json, figure, data and state, and --overwrite."""
+    texts = {
+        "json": "write the result as JSON to FILE, or to standard output with -",
+        "figure": "write a figure to FILE (.png, .pdf or .svg)",
+        "data": "write the numbers of the figure to FILE (CSV)",
+        "state": "write the solution to FILE (HDF5), for bands and effective",
+    }
+
+    def decorate(command: Any) -> Any:
+        command = click.option("--overwrite", is_flag=True, help="replace output files that exist")(command)
+        for name in reversed(names):
+            option = click.option(f"--{name}", f"{name}_file", type=FilePath, metavar="FILE", help=texts[name])
+            command = option(command)
+        return command
+
+    return decorate
+
+
+def example(text: str) -> str:
+    """Epilog with one worked example."""
+    return f"\b\nExample:\n  {text}"
+
+
+class Group(click.Group):
+    """Turns errors a user can mend into one message and the exit codes of the interface."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        try:
+            return super().invoke(ctx)
+        except InputError as error:
+            click.echo(f"error: {error}", err=True)
+            ctx.exit(EXIT_INPUT)
+        except KeyboardInterrupt:
+            click.echo("interrupted; nothing half-written was left", err=True)
+            ctx.exit(EXIT_INTERRUPTED)
+
+
+@click.group(cls=Group, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(package_name="kondomf")
+def main() -> None:
+    """Mean-field phases of conduction electrons on Kitaev magnets, and the quantum oscillations they would show."""
+
+
+@main.command(epilog=example("kondomf new my_layers"))
+@click.argument("folder", type=FilePath)
+@click.option("--overwrite", is_flag=True, help="replace files that exist")
+def new(folder: Path, overwrite: bool) -> None:
+    """Write a commented material and sweep file of an invented heterostructure into FOLDER."""
+    from kondomf.material import write_templates
+
+    for path in write_templates(folder, overwrite=overwrite):
+        click.echo(f"wrote {path}")
+
+
+@main.command(epilog=example("kondomf check material.toml"))
+@click.argument("material", type=FilePath)
+@outputs("json")
+def check(material: Path, json_file: Path | None, overwrite: bool) -> None:
+    """Validate a MATERIAL file and show what follows from it, with warnings where the method leaves its range."""
+    from kondomf.material import derive, load_material, table
+    from kondomf.report.tables import align
+
+    _refuse(overwrite, json_file)
+    derived = derive(load_material(material))
+    lines = [align(table(derived)), *(f"warning: {text}" for text in derived.warnings)]
+    _report(derived.to_dict(), "\n".join(lines), json_file, overwrite)
+
+
+@main.command(epilog=example("kondomf solve material.toml --state state.h5 --json result.json"))
+@click.argument("material", type=FilePath)
+@click.option("--start", "start", metavar="NAME", help='use this standard start alone, e.g. "decoupled M1"')
+@click.option("--keep-saddle", is_flag=True, help="with --start: stop at the nearest stationary point, even a saddle")
+@click.option("--quiet", is_flag=True, help="do not report the starts as they finish")
+@outputs("json", "state")
+@click.pass_context
+def solve(
+    ctx: click.Context,
+    material: Path,
+    start: str | None,
+    keep_saddle: bool,
+    quiet: bool,
+    json_file: Path | None,
+    state_file: Path | None,
+    overwrite: bool,
+) -> None:
+    """Find the lowest state of a MATERIAL and certify it. Exit code 1 if it is no minimum."""
+    from kondomf.material import load_material
+    from kondomf.meanfield import Settings, named_start, save_state
+    from kondomf.meanfield import solve as solve_material
+    from kondomf.phases import summarize
+    from kondomf.report.tables import LIMITS, solution_table
+
+    if keep_saddle and start is None:
+        raise InputError("--keep-saddle studies one start: name it with --start")
+    _refuse(overwrite, json_file, state_file)
+    layers = load_material(material)
+    solution = solve_material(
+        layers,
+        only_starts=None if start is None else [named_start(layers, start)],
+        settings=Settings(keep_saddle=keep_saddle),
+        progress=None if quiet else lambda text: click.echo(text, err=True),
+    )
+    if state_file is not None:
+        save_state(solution, state_file, overwrite=overwrite)
+    summary = summarize(solution)
+    _report(summary, f"{solution_table(summary)}\n{LIMITS}", json_file, overwrite)
+    ctx.exit(0 if solution.converged else EXIT_NUMERICS)
+
+
+@main.command(epilog=example("kondomf bands state.h5 --figure bands.png --window 200"))
+@click.argument("state", type=FilePath)
+@click.option("--window", "window_meV", type=float, metavar="MEV", help="energies shown, from -MEV to MEV")
+@click.option("--points", type=click.IntRange(10), default=600, show_default=True, help="wave vectors along the path")
+@click.option("--grid", type=click.IntRange(4), default=96, show_default=True, help="density of states: k per direction")
+@outputs("json", "figure", "data")
+def bands(
+    state: Path,
+    window_meV: float | None,
+    points: int,
+    grid: int,
+    json_file: Path | None,
+    figure_file: Path | None,
+    data_file: Path | None,
+    overwrite: bool,
+) -> None:
+    """Quasiparticle bands of a solved STATE along Γ-K-M-Γ, coloured by conduction weight, and density of states."""
+    from kondomf.meanfield import load_state
+    from kondomf.phases.band_structure import band_structure
+    from kondomf.report.bands import draw_band_structure
+    from kondomf.report.style import save_figure
+    from kondomf.report.tables import align
+
+    _refuse(overwrite, json_file, figure_file, data_file)
+    if window_meV is not None and not window_meV > 0:
+        raise InputError(f"--window {window_meV:g}: give an energy in meV above zero")
+    found = band_structure(load_state(state), points, grid, window_meV)
+    if figure_file:
+        save_figure(figure_file, lambda figure: draw_band_structure(figure, found), (7.0, 4.0), overwrite)
+    if data_file:
+        write_csv(data_file, found.columns(), overwrite)
+    _report(found.to_dict(), align(found.rows()), json_file, overwrite)
+
+
+@main.command(epilog=example("kondomf sweep sweep.toml --run results/map --workers 2"))
+@click.argument("sweep_file", metavar="SWEEP", type=FilePath)
+@click.option("--run", "folder", type=FilePath, metavar="FOLDER", help="run folder [default: SWEEP without .toml, + .run]")
+@click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="processes on this machine")
+@click.pass_context
+def sweep(ctx: click.Context, sweep_file: Path, folder: Path | None, workers: int) -> None:
+    """Compute all points of a SWEEP file, or resume a sweep that was interrupted.
+
+    The first Ctrl-C lets the running points finish and ends with exit code 130; the same command goes on from there.
+    """
+    from kondomf.sweep import console_progress, run_sweep
+
+    folder = folder or sweep_file.with_suffix(".run")
+    backend = "serial" if workers == 1 else "local"
+    outcome = run_sweep(sweep_file, folder, workers=workers, backend=backend, progress=console_progress())
+    click.echo(f"{outcome.done} points done, {outcome.failed} failed, {outcome.remaining} to do, in {folder}")
+    if outcome.problem:
+        click.echo(f"error: {outcome.problem}", err=True)
+    if outcome.interrupted:
+        ctx.exit(EXIT_INTERRUPTED)
+    ctx.exit(EXIT_NUMERICS if outcome.problem or outcome.remaining else 0)
+
+
+@main.command(epilog=example("kondomf progress results/map"))
+@click.argument("run", type=FilePath)
+def progress(run: Path) -> None:
+    """Show how far a RUN folder is, also while it is being computed."""
+    from kondomf.sweep import open_run, progress_text
+
+    click.echo(progress_text(open_run(run)))
+
+
+@main.command("map", epilog=example("kondomf map results/map --figure map.png --cut conduction_layer.filling=0.95"))
+@click.argument("run", type=FilePath)
+@click.option("--class", "phase_class", metavar="NAME", help="class of solutions shown [default: the first of the sweep]")
+@click.option("--cut", metavar="KEY=VALUE", multiple=True, help="line cut at the grid value nearest to VALUE; repeatable")
+@outputs("json", "figure", "data")
+def map_(
+    run: Path,
+    phase_class: str | None,
+    cut: tuple[str, ...],
+    json_file: Path | None,
+    figure_file: Path | None,
+    data_file: Path | None,
+    overwrite: bool,
+) -> None:
+    """Phase map of a RUN over its two axes with the regions named, or line cuts of F, hybridization and moments."""
+    from kondomf.report.map import draw, figure_size, read_map
+    from kondomf.report.style import save_figure
+    from kondomf.report.tables import LIMITS
+    from kondomf.sweep import open_run
+
+    _refuse(overwrite, json_file, figure_file, data_file)
+    found = read_map(open_run(run), phase_class, cut)
+    if figure_file:
+        save_figure(figure_file, lambda figure: draw(figure, found), figure_size(found), overwrite)
+    if data_file:
+        write_csv(data_file, found.columns(), overwrite)
+    _report(found.to_dict(), f"{found.text()}\n{LIMITS}", json_file, overwrite)
+
+
+@main.command(epilog=example("kondomf effective material.toml --json model.json"))
+@click.argument("source", type=FilePath)
+@click.option("--window", "window_meV", type=float, default=50.0, show_default=True, metavar="MEV", help="energy window")
+@outputs("json")
+@click.pass_context
+def effective(
+    ctx: click.Context, source: Path, window_meV: float, json_file: Path | None, overwrite: bool
+) -> None:
+    """Four-band model of the heavy Fermi liquid of SOURCE: a solved state (.h5) or a material file.
+
+    A material is solved by the isotropic reduced equations, which cost nothing at meV scales. They hold for the so4
+    form, isotropic couplings and no moments; use solve --state for anything else.
+    """
+    from kondomf.effective import effective_model
+    from kondomf.report.tables import LIMITS, align
+
+    _refuse(overwrite, json_file)
+    found = effective_model(source, window_meV)
+    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+    ctx.exit(0 if found.converged else EXIT_NUMERICS)
+
+
+@main.command(epilog=example("kondomf oscillations model.json --fields 10,15,20 --temperatures 0.2:20:60 --figure osc.png"))
+@click.argument("model", type=FilePath)
+@click.option("--fields", default="10,15,20", show_default=True, metavar="TESLA", help="list, or FROM:TO:POINTS")
+@click.option("--temperatures", default="0.2:20:60", show_default=True, metavar="KELVIN", help="list, or FROM:TO:POINTS")
+@click.option("--harmonic", type=click.IntRange(1), default=1, show_default=True)
+@click.option(
+    "--observable", type=click.Choice(["magnetization", "grand_potential"]), default="magnetization", show_default=True
+)
+@click.option("--dingle", type=click.FloatRange(0), default=0.0, show_default=True, metavar="KELVIN", help="Dingle temperature of the electrons")
+@outputs("json", "figure", "data")
+def oscillations(
+    model: Path,
+    fields: str,
+    temperatures: str,
+    harmonic: int,
+    observable: str,
+    dingle: float,
+    json_file: Path | None,
+    figure_file: Path | None,
+    data_file: Path | None,
+    overwrite: bool,
+) -> None:
+    """Quantum oscillations of an effective MODEL (JSON written by effective): amplitude against temperature.
+
+    Beside each curve stands the Lifshitz-Kosevich curve of the same cyclotron mass. The parameters are those of the
+    temperature at which the model was obtained.
+    """
+    from kondomf.effective import read_model
+    from kondomf.oscillations import predict
+    from kondomf.report.oscillations import draw_prediction
+    from kondomf.report.style import save_figure
+    from kondomf.report.tables import LIMITS, align
+
+    _refuse(overwrite, json_file, figure_file, data_file)
+    found = predict(
+        read_model(model), number_list("--fields", fields), number_list("--temperatures", temperatures),
+        harmonic=harmonic, observable=observable, dingle_K=dingle,
+    )
+    if figure_file:
+        save_figure(figure_file, lambda figure: draw_prediction(figure, found), (7.0, 5.5), overwrite)
+    if data_file:
+        write_csv(data_file, found.table.columns(), overwrite)
+    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+
+
+def number_list(option: str, text: str) -> list[float]:
+    """Numbers "1,2,5" or "FROM:TO:POINTS" (evenly spaced). Raises InputError for anything else."""
+    import numpy as np
+
+    try:
+        if ":" in text:
+            first, last, points = text.split(":")
+            return [float(x) for x in np.linspace(float(first), float(last), int(points))]
+        return [float(x) for x in text.split(",")]
+    except ValueError:
+        raise InputError(f"{option} {text!r}: give numbers like 10,15,20 or FROM:TO:POINTS like 0.2:20:60") from None
+
+
+def write_csv(path: Path, columns: dict[str, Any], overwrite: bool) -> None:
+    """Write columns of equal length with a header line of their names."""
+    import csv
+
+    def write(temporary: Path) -> None:
+        with temporary.open("w", newline="", encoding="utf-8") as stream:
+            writer = csv.writer(stream)
+            writer.writerow(columns)
+            writer.writerows(zip(*(list(column) for column in columns.values()), strict=True))
+
+    write_atomically(path, write, overwrite=overwrite)
+
+
+def _refuse(overwrite: bool, *paths: Path | None) -> None:
+    """Refuse outputs that exist or cannot be written before anything is computed."""
+    for path in paths:
+        if path is not None and str(path) != "-":
+            refuse_existing(path, overwrite)
+
+
+def _report(result: dict[str, Any], text: str, json_file: Path | None, overwrite: bool) -> None:
+    """Print the table, and write the JSON to a file; "-" puts the JSON alone on standard output."""
+    document = json.dumps(result, indent=2, ensure_ascii=False, default=float)
+    if json_file is not None and str(json_file) == "-":
+        click.echo(document)
+        return
+    click.echo(text)
+    if json_file is not None:
+        write_atomically(json_file, lambda path: _write_text(path, document + "\n"), overwrite=overwrite)
+
+
+def _write_text(path: Path, text: str) -> None:
+    path.write_text(text, encoding="utf-8")
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,190 @@
+"""Phase map of a run over its two axes, and line cuts along the first of them."""
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from kondomf.errors import InputError
+from kondomf.report.style import CYCLE
+from kondomf.report.tables import align
+from kondomf.sweep import Run
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+Array = NDArray[np.float64]
+
+MARKERS = "osD^vP*Xh8"
+CUTS = (
+    ("free_energy_meV_per_cell", "F (meV per cell)"),
+    ("hybridization", "largest hybridization"),
+    ("spin_moment", "spin moment (ħ)"),
+)
+"""Quantities of a line cut and their labels."""
+GOOD = ("minimum", "minimum-in-class")
+
+
+@dataclass(frozen=True)
+class PhaseMap:
+    """Phases and statuses (Nx, Ny) of one class of a run at x (Nx,), y (Ny,), and the cuts asked for.
+
+    quantities: arrays (Nx, Ny) by name; cuts: indices along y. Points without a result are "" and NaN.
+    """
+
+    name: str
+    phase_class: str
+    keys: tuple[str, str]
+    x: Array
+    y: Array
+    phase: NDArray[Any]
+    status: NDArray[Any]
+    quantities: dict[str, Array]
+    cuts: tuple[int, ...]
+
+    @property
+    def names(self) -> list[str]:
+        """Phases met, most frequent first."""
+        found, counts = np.unique(self.phase[self.phase != ""].astype(str), return_counts=True)
+        return [str(found[i]) for i in np.argsort(-counts, kind="stable")]
+
+    def columns(self) -> dict[str, Any]:
+        """One row per point."""
+        x, y = np.meshgrid(self.x, self.y, indexing="ij")
+        table = {self.keys[0]: x.ravel(), self.keys[1]: y.ravel(), "phase": self.phase.ravel()}
+        table["status"] = self.status.ravel()
+        return table | {name: values.ravel() for name, values in self.quantities.items()}
+
+    def to_dict(self) -> dict[str, Any]:
+        return {
+            "name": self.name,
+            "class": self.phase_class,
+            "axes": {self.keys[0]: self.x.tolist(), self.keys[1]: self.y.tolist()},
+            "phase": self.phase.tolist(),
+            "status": self.status.tolist(),
+            **{name: [[_plain(v) for v in row] for row in values] for name, values in self.quantities.items()},
+        }
+
+    def text(self) -> str:
+        """How many points each phase holds, and the ranges where it is found."""
+        rows = [("map", f"{self.name}, class {self.phase_class}")]
+        for name in self.names:
+            i, j = np.nonzero(self.phase == name)
+            ranges = ", ".join(
+                f"{axis_label(key)} {values[index].min():g} to {values[index].max():g}"
+                for key, values, index in zip(self.keys, (self.x, self.y), (i, j), strict=True)
+            )
+            rows.append((name, f"{len(i)} points, {ranges}"))
+        bad = (self.status != "") & ~np.isin(self.status.astype(str), GOOD)
+        rows.append(("no minimum", f"{bad.sum()} points"))
+        rows.append(("not computed yet", f"{(self.status == '').sum()} points"))
+        return align(rows)
+
+
+def read_map(run: Run, phase_class: str | None, cuts: tuple[str, ...] = ()) -> PhaseMap:
+    """Read one class of a run with two axes; `cuts` are texts "key=value" on the second axis.
+
+    Raises InputError: no such class, not two axes, or a cut along another key.
+    """
+    if len(run.axes) != 2:
+        raise InputError(f"{run.folder} has {len(run.axes)} axes; a map needs two")
+    name = phase_class or run.phases[0]
+    status = run.status(name)
+    if not (status != "").any():
+        raise InputError(f"{run.folder} holds no finished point of class {name} yet; look at it with: kondomf progress")
+    one, two = run.axes
+    quantities = {key: np.asarray(run.quantity(name, key), dtype=float) for key, _ in CUTS}
+    y = np.array(two.values)
+    indices = tuple(_cut_index(text, two.key, y) for text in cuts)
+    return PhaseMap(
+        name=str(run.material["name"]),
+        phase_class=name,
+        keys=(one.key, two.key),
+        x=np.array(one.values),
+        y=y,
+        phase=run.quantity(name, "phase"),
+        status=status,
+        quantities=quantities,
+        cuts=indices,
+    )
+
+
+def _cut_index(text: str, key: str, values: Array) -> int:
+    name, _, value = text.partition("=")
+    try:
+        number = float(value)
+    except ValueError:
+        raise InputError(f"--cut {text!r}: give KEY=VALUE, for instance {key}={values[len(values) // 2]:g}") from None
+    if name != key:
+        raise InputError(f"--cut {text!r}: cuts run along the first axis; fix a value of the second, {key}")
+    return int(np.abs(values - number).argmin())
+
+
+def axis_label(key: str) -> str:
+    """What people call a swept key: its last part, with the unit in brackets."""
+    section, name = key.split(".")[0], key.split(".")[-1]
+    unit = next((unit for unit in ("meV", "K", "angstrom", "degree") if name.endswith(f"_{unit}")), None)
+    words = (name.removesuffix(f"_{unit}") if unit else name).replace("_", " ")
+    words = f"Kondo {words}" if section == "kondo" else words
+    return f"{words} ({unit})" if unit else words
+
+
+def figure_size(found: PhaseMap) -> tuple[float, float]:
+    """Inches: one panel for a map, three for cuts."""
+    return (9.0, 3.4) if found.cuts else (6.5, 4.8)
+
+
+def draw(figure: "Figure", found: PhaseMap) -> None:
+    """The map, or if cuts were asked for one panel per quantity."""
+    if found.cuts:
+        draw_cuts(list(figure.subplots(1, len(CUTS))), found)
+    else:
+        draw_map(figure.subplots(), found)
+    figure.suptitle(f"{found.name}: class {found.phase_class}", fontsize=9)
+
+
+def draw_map(axes: "Axes", found: PhaseMap) -> None:
+    """Phases as pale cells with a marker per point and the name written in the region; doubtful points are crossed."""
+    from matplotlib.colors import ListedColormap
+
+    number = np.full(found.phase.shape, np.nan)
+    for i, name in enumerate(found.names):
+        number[found.phase == name] = i
+    colors = [_pale(CYCLE[i % len(CYCLE)]) for i in range(len(found.names))]
+    axes.pcolormesh(
+        found.x, found.y, number.T, cmap=ListedColormap(colors), vmin=-0.5, vmax=len(colors) - 0.5, shading="nearest"
+    )
+    for i, name in enumerate(found.names):
+        x, y = np.nonzero(found.phase == name)
+        style = {"marker": MARKERS[i % len(MARKERS)], "color": CYCLE[i % len(CYCLE)]}
+        axes.scatter(found.x[x], found.y[y], s=9, label=f"{name} ({len(x)})", **style)
+    bad = (found.status != "") & ~np.isin(found.status.astype(str), GOOD)
+    if bad.any():
+        x, y = np.nonzero(bad)
+        axes.scatter(found.x[x], found.y[y], marker="x", s=40, color="black", label=f"no minimum ({len(x)})")
+    axes.set_xlabel(axis_label(found.keys[0]))
+    axes.set_ylabel(axis_label(found.keys[1]))
+    axes.figure.legend(loc="outside lower center", ncols=2, frameon=False, fontsize=8)  # type: ignore[union-attr]
+
+
+def draw_cuts(panels: "list[Axes]", found: PhaseMap) -> None:
+    """F, hybridization and moments along the first axis, one line per cut."""
+    for axes, (name, label) in zip(panels, CUTS, strict=True):
+        for i, cut in enumerate(found.cuts):
+            style = {"marker": MARKERS[i % len(MARKERS)], "markersize": 3.5}
+            axes.plot(found.x, found.quantities[name][:, cut], label=f"{found.y[cut]:g}", **style)
+        axes.set_ylabel(label)
+        axes.set_xlabel(axis_label(found.keys[0]))
+    panels[0].legend(frameon=False, fontsize=8, title=axis_label(found.keys[1]))
+
+
+def _pale(color: str) -> tuple[float, float, float]:
+    red, green, blue = (0.6 + 0.4 * int(color[i : i + 2], 16) / 255 for i in (1, 3, 5))
+    return red, green, blue
+
+
+def _plain(value: float) -> float | None:
+    return value if math.isfinite(value) else None

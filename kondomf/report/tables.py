@@ -1,0 +1,60 @@
+"""Short tables for people."""
+
+from collections.abc import Sequence
+from typing import Any
+
+LIMITS = (
+    "Mean-field theory of Majorana partons without gauge fluctuations: F is an upper bound in the unprojected parton "
+    "space, couplings are mean-field couplings, and transition temperatures are crossovers in reality."
+)
+"""Stated wherever a result is shown."""
+
+
+def align(rows: Sequence[tuple[str, str]]) -> str:
+    """Two columns, names padded to the same width."""
+    width = max(len(name) for name, _ in rows)
+    return "\n".join(f"{name:<{width}}  {text}" for name, text in rows)
+
+
+def solution_table(summary: dict[str, Any]) -> str:
+    """Phase, evidence, free energy and order parameters of one solution (a dict of `phases.summarize`)."""
+    zero = summary["zero_modes"]
+    rows = [("phase", summary["phase"])]
+    rows += [("", f"- {text}") for text in summary["phase_evidence"][:3]]
+    rows += [
+        ("status", f"{summary['status']}: {summary['message']}"),
+        ("free energy", f"{summary['free_energy_meV_per_cell']:.6f} meV per cell"),
+        ("entropy", f"{summary['entropy_kB_per_cell']:.6f} k_B per cell"),
+        ("filling", f"{summary['filling']:.8f} electrons per conduction site"),
+        ("chemical potential", f"{summary['chemical_potential_meV']:.6f} meV"),
+        ("hybridization", "; ".join(_numbers(site) for site in summary["hybridization_singular_values"])),
+        ("spin moments", "; ".join(_numbers(site) for site in summary["spin_moment"])),
+        ("electron moments", "; ".join(_numbers(site) for site in summary["electron_moment"])),
+        ("pairing", "singlet {singlet:.2g}, triplet {triplet:.2g} (normal {normal:.3g})".format(**summary["pairing"])),
+        ("bond energies", ", ".join(f"{k} {_numbers(e)}" for k, e in summary["bond_energies_meV"].items()) + " meV"),
+        ("gap", f"{summary['gap_meV']:.4g} meV"),
+        ("residual", f"{summary['residual_meV']:.1e} meV (largest component)"),
+        ("zone error", f"{summary['zone_error_meV']:.1e} meV per cell (grid doubled)"),
+    ]
+    if summary["curvature_min"] is not None:
+        rows.append(("lowest curvature", f"{summary['curvature_min']:.6f}"))
+    if summary["phase_class"] != "any" and summary["curvature_full_space"] is not None:
+        rows.append(("outside the class", f"lowest curvature {summary['curvature_full_space']:.6f}"))
+    if zero is not None:
+        text = f"{zero['count']}: {zero['broken_generators']} broken generators, {zero['gauge_directions']} gauge"
+        rows.append(("zero modes", text + (f", {zero['unexplained']} unexplained" if zero["unexplained"] else "")))
+    rows += [("starts", _trials(summary)), ("evaluations", f"{summary['evaluations']} matrices")]
+    return align(rows)
+
+
+def _trials(summary: dict[str, Any]) -> str:
+    """How many starts ended lowest, on the grid they were searched on."""
+    energies = [trial["free_energy_meV_per_cell"] for trial in summary["trials"]]
+    lowest = min(energies)
+    count = sum(energy < lowest + 1e-6 * abs(lowest) for energy in energies)
+    return f'{count} of {len(energies)} ended at the lowest free energy; shown: from "{summary["start"]}"'
+
+
+def _numbers(values: Sequence[float]) -> str:
+    """Four digits each; -0 and rounding dust become 0."""
+    return " ".join(f"{0.0 if abs(value) < 5e-5 else value:.4f}" for value in values)
