@@ -12,7 +12,7 @@ from kondomf.errors import InputError
 from kondomf.files import refuse_existing, write_atomically
 
 if TYPE_CHECKING:
-    from kondomf.effective import FourBandModel
+    pass
 
 EXIT_NUMERICS, EXIT_INPUT, EXIT_INTERRUPTED = 1, 2, 130
 
@@ -133,7 +133,9 @@ def solve(
 @click.argument("state", type=FilePath)
 @click.option("--window", "window_meV", type=float, metavar="MEV", help="energies shown, from -MEV to MEV")
 @click.option("--points", type=click.IntRange(10), default=600, show_default=True, help="wave vectors along the path")
-@click.option("--grid", type=click.IntRange(4), default=96, show_default=True, help="density of states: k per direction")
+@click.option(
+    "--grid", type=click.IntRange(4), default=96, show_default=True, help="density of states: k per direction"
+)
 @outputs("json", "figure", "data")
 def bands(
     state: Path,
@@ -165,7 +167,9 @@ def bands(
 
 @main.command(epilog=example("kondomf sweep sweep.toml --run results/map --workers 2"))
 @click.argument("sweep_file", metavar="SWEEP", type=FilePath)
-@click.option("--run", "folder", type=FilePath, metavar="FOLDER", help="run folder [default: SWEEP without .toml, + .run]")
+@click.option(
+    "--run", "folder", type=FilePath, metavar="FOLDER", help="run folder [default: SWEEP without .toml, + .run]"
+)
 @click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="processes on this machine")
 @click.pass_context
 def sweep(ctx: click.Context, sweep_file: Path, folder: Path | None, workers: int) -> None:
@@ -197,8 +201,12 @@ def progress(run: Path) -> None:
 
 @main.command("map", epilog=example("kondomf map results/map --figure map.png --cut conduction_layer.filling=0.95"))
 @click.argument("run", type=FilePath)
-@click.option("--class", "phase_class", metavar="NAME", help="class of solutions shown [default: the first of the sweep]")
-@click.option("--cut", metavar="KEY=VALUE", multiple=True, help="line cut at the grid value nearest to VALUE; repeatable")
+@click.option(
+    "--class", "phase_class", metavar="NAME", help="class of solutions shown [default: the first of the sweep]"
+)
+@click.option(
+    "--cut", metavar="KEY=VALUE", multiple=True, help="line cut at the grid value nearest to VALUE; repeatable"
+)
 @outputs("json", "figure", "data")
 def map_(
     run: Path,
@@ -226,12 +234,12 @@ def map_(
 
 @main.command(epilog=example("kondomf effective material.toml --json model.json"))
 @click.argument("source", type=FilePath)
-@click.option("--window", "window_meV", type=float, default=50.0, show_default=True, metavar="MEV", help="energy window")
+@click.option(
+    "--window", "window_meV", type=float, default=50.0, show_default=True, metavar="MEV", help="energy window"
+)
 @outputs("json")
 @click.pass_context
-def effective(
-    ctx: click.Context, source: Path, window_meV: float, json_file: Path | None, overwrite: bool
-) -> None:
+def effective(ctx: click.Context, source: Path, window_meV: float, json_file: Path | None, overwrite: bool) -> None:
     """Four-band model of the heavy Fermi liquid of SOURCE: a solved state (.h5) or a material file.
 
     A material is solved by the isotropic reduced equations, which cost nothing at meV scales. They hold for the so4
@@ -246,15 +254,26 @@ def effective(
     ctx.exit(0 if found.converged else EXIT_NUMERICS)
 
 
-@main.command(epilog=example("kondomf oscillations model.json --fields 10,15,20 --temperatures 0.2:20:60 --figure osc.png"))
+@main.command(
+    epilog=example("kondomf oscillations model.json --fields 10,15,20 --temperatures 0.2:20:60 --figure r.png")
+)
 @click.argument("model", type=FilePath)
 @click.option("--fields", default="10,15,20", show_default=True, metavar="TESLA", help="list, or FROM:TO:POINTS")
-@click.option("--temperatures", default="0.2:20:60", show_default=True, metavar="KELVIN", help="list, or FROM:TO:POINTS")
+@click.option(
+    "--temperatures", default="0.2:20:60", show_default=True, metavar="KELVIN", help="list, or FROM:TO:POINTS"
+)
 @click.option("--harmonic", type=click.IntRange(1), default=1, show_default=True)
 @click.option(
     "--observable", type=click.Choice(["magnetization", "grand_potential"]), default="magnetization", show_default=True
 )
-@click.option("--dingle", type=click.FloatRange(0), default=0.0, show_default=True, metavar="KELVIN", help="Dingle temperature of the electrons")
+@click.option(
+    "--dingle",
+    type=click.FloatRange(0),
+    default=0.0,
+    show_default=True,
+    metavar="KELVIN",
+    help="Dingle temperature of the electrons",
+)
 @outputs("json", "figure", "data")
 def oscillations(
     model: Path,
@@ -281,8 +300,12 @@ def oscillations(
 
     _refuse(overwrite, json_file, figure_file, data_file)
     found = predict(
-        read_model(model), number_list("--fields", fields), number_list("--temperatures", temperatures),
-        harmonic=harmonic, observable=observable, dingle_K=dingle,
+        read_model(model),
+        number_list("--fields", fields),
+        number_list("--temperatures", temperatures),
+        harmonic=harmonic,
+        observable=observable,
+        dingle_K=dingle,
     )
     if figure_file:
         save_figure(figure_file, lambda figure: draw_prediction(figure, found), (7.0, 5.5), overwrite)

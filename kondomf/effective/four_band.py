@@ -11,6 +11,7 @@ H commutes with the chirality k.sigma / |k| = s, so that the bands are those of 
 Units: energies meV, k in 1/angstrom, velocities as slopes hbar v in meV angstrom.
 """
 
+from collections.abc import Callable
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -23,6 +24,7 @@ from kondomf.material.honeycomb import bloch_factor, integrated_density
 from kondomf.units import velocity_m_per_s
 
 Array = NDArray[np.float64]
+FullBands = Callable[[Array, Array], Array]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -145,9 +147,9 @@ def from_reduced(solution: ReducedSolution, lattice_constant_angstrom: float) ->
     )
 
 
-def reduced_bands(solution: ReducedSolution, g: ArrayLike) -> Array:
-    """Full bands of the reduced theory in meV, shape (N, 4), ascending, at the band energies g, shape (N,)."""
-    g = np.asarray(g, dtype=float)[:, None]
+def reduced_bands(solution: ReducedSolution, phase1: Array, phase2: Array) -> Array:
+    """Full bands of the reduced theory in meV, shape (N, 4), ascending, at the phases k.a1 and k.a2, each (N,)."""
+    g = np.abs(bloch_factor(phase1, phase2))[:, None]
     x = np.concatenate([g, -g], axis=1)
     electron, spinon = -solution.mu - solution.inputs.hopping_meV * x, solution.lam + solution.t_f * x
     radius = np.hypot((electron - spinon) / 2, solution.b)
@@ -156,14 +158,15 @@ def reduced_bands(solution: ReducedSolution, g: ArrayLike) -> Array:
 
 
 def band_deviation(
-    model: FourBandModel, solution: ReducedSolution, window_meV: float, radii: int = 400, angles: int = 24
+    model: FourBandModel, full_bands: FullBands, window_meV: float, radii: int = 400, angles: int = 24
 ) -> BandDeviation:
-    """How far the four-band model is from the full bands h(g(k)) within an energy window around the Fermi level.
+    """How far the four-band model is from the full bands within an energy window around the Fermi level.
 
     The two differ by the trigonal warping and curvature of the cone, that is by g(k) against (sqrt(3)/2) a |k|. States
     are sampled on rays from the Dirac point up to the distance of the nearest M point, 2 pi / (3 a), weighted by area;
     a state counts if its energy in either model is within the window.
 
+    full_bands: (k.a1, k.a2), each (N,) -> energies (N, 4 m) in meV, ascending; m = 2 if they count both spins.
     window_meV: half width of the window, above zero (InputError otherwise).
     radii, angles: number of distances and of directions in a sector of 120 degrees.
     """
@@ -177,8 +180,8 @@ def band_deviation(
     # a1 = a (1, 0), a2 = a (1/2, sqrt(3)/2); the Dirac point has k.a1 = 4 pi / 3, k.a2 = 2 pi / 3.
     phase1 = 4 * np.pi / 3 + lattice_constant * kx
     phase2 = 2 * np.pi / 3 + lattice_constant * (kx / 2 + np.sqrt(3) / 2 * ky)
-    full = reduced_bands(solution, np.abs(bloch_factor(phase1, phase2)))
-    approximate = model.bands(distance)
+    full = full_bands(phase1, phase2)
+    approximate = np.repeat(model.bands(distance), full.shape[1] // 4, axis=1)
     inside = np.minimum(np.abs(full), np.abs(approximate)) <= window_meV
     weight = np.broadcast_to(distance[:, None], full.shape)[inside]
     error = (approximate - full)[inside]
@@ -187,7 +190,7 @@ def band_deviation(
         max_meV=float(np.abs(error).max()) if error.size else None,
         rms_meV=float(np.sqrt((weight * error**2).sum() / weight.sum())) if error.size else None,
         states=int(inside.sum()),
-        fermi_area_ratio=_fermi_area_ratio(model, solution.inputs.hopping_meV),
+        fermi_area_ratio=_fermi_area_ratio(model, 2 / np.sqrt(3) * model.hbar_v_meV_angstrom / lattice_constant),
     )
 
 

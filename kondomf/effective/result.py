@@ -2,16 +2,22 @@
 
 import json
 from dataclasses import dataclass, fields
+from functools import partial
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 import kondomf
-from kondomf.effective.extract import from_solution
-from kondomf.effective.four_band import BandDeviation, FourBandModel, from_reduced
+from kondomf.effective.extract import fermion_matrix, from_solution
+from kondomf.effective.four_band import BandDeviation, FourBandModel, band_deviation, from_reduced, reduced_bands
 from kondomf.effective.reduced import solve_reduced
 from kondomf.errors import InputError
 from kondomf.material import Material, load_material
 from kondomf.meanfield import load_state
+
+Array = NDArray[np.float64]
 
 FORMAT = "kondomf effective model"
 SCHEMA = 1
@@ -73,3 +79,91 @@ def effective_model(source: Path, window_meV: float) -> EffectiveResult:
     if source.is_file() and (source.suffix in (".h5", ".hdf5") or h5py.is_hdf5(source)):
         return _of_state(source, window_meV)
     return _of_material(load_material(source), window_meV)
+
+
+def read_model(path: Path) -> FourBandModel:
+    """Model of a JSON file that `effective --json` wrote.
+
+    Raises InputError: missing, not JSON, another kind or schema.
+    """
+    try:
+        document = json.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise InputError(f"no file {path}; write one with: kondomf effective SOURCE --json {path}") from None
+    except (OSError, UnicodeDecodeError, json.JSONDecodeError) as error:
+        raise InputError(f"{path} is no model file: {error}; write one with: kondomf effective SOURCE --json") from None
+    if not isinstance(document, dict) or (document.get("format"), document.get("schema")) != (FORMAT, SCHEMA):
+        raise InputError(f"{path} is no model file of schema {SCHEMA}; write one with: kondomf effective SOURCE --json")
+    names = [field.name for field in fields(FourBandModel)]
+    missing = [name for name in names if name not in document.get("model", {})]
+    if missing:
+        raise InputError(f"{path} lacks {', '.join(missing)} in its model; write it again with kondomf effective")
+    values = {name: document["model"][name] for name in names}
+    return FourBandModel(**{**values, "notes": tuple(values["notes"])})
+
+
+def _of_state(path: Path, window_meV: float) -> EffectiveResult:
+    solution = load_state(path)
+    found = from_solution(solution)
+
+    def full(phase1: Array, phase2: Array) -> Array:
+        k = np.stack([phase1, phase2], axis=1) / (2 * np.pi)
+        return np.asarray(np.linalg.eigvalsh(fermion_matrix(solution, k)[0]), dtype=np.float64)
+
+    evidence = {
+        "free_energy_meV_per_cell": solution.free_energy_meV_per_cell,
+        "residual_meV": solution.residual_meV,
+        "curvature_min": solution.curvature_min,
+        "curvature_full_space": solution.curvature_full_space,
+        "zone_error_meV": solution.zone_error_meV,
+        "pairing_meV": found.pairing_meV,
+        "hybridization_spread_meV": found.hybridization_spread_meV,
+        "level_spread_meV": found.level_spread_meV,
+        "velocity_spread_meV": found.velocity_spread_meV,
+        "inputs": solution.inputs,
+    }
+    return EffectiveResult(found.model, band_deviation(found.model, full, window_meV), solution.status, evidence)
+
+
+def _of_material(material: Material, window_meV: float) -> EffectiveResult:
+    _check_isotropic(material)
+    solution = solve_reduced(
+        material.model_hopping_meV,
+        material.spin_layer.kitaev_meV[0],
+        material.kondo.coupling_meV,
+        material.model_filling,
+        material.temperature_meV,
+    )
+    model = from_reduced(solution, material.spin_layer.lattice_constant_angstrom)
+    deviation = band_deviation(model, partial(reduced_bands, solution), window_meV)
+    return EffectiveResult(model, deviation, solution.status, {**solution.to_dict(), "inputs": material.to_dict()})
+
+
+def _check_isotropic(material: Material) -> None:
+    """Raise InputError where the reduced equations do not hold exactly, with all reasons."""
+    spins, electrons, forms = material.spin_layer, material.conduction_layer, material.mean_field
+    reasons = {
+        'exchange_form and kondo_form must be "so4"': (forms.exchange_form, forms.kondo_form) != ("so4", "so4"),
+        "kitaev_meV must be equal on the three bonds": len(set(spins.kitaev_meV)) > 1,
+        "Heisenberg, Gamma and further exchange must vanish": any(
+            (
+                spins.heisenberg_meV,
+                spins.gamma_meV,
+                spins.gamma_prime_meV,
+                spins.heisenberg_2_meV,
+                spins.heisenberg_3_meV,
+                spins.kitaev_2_meV,
+            )
+        ),
+        "the conduction layer must have nearest-neighbour hopping alone": any(
+            (electrons.next_hopping_meV, electrons.sublattice_offset_meV, electrons.kane_mele_meV, electrons.rashba_meV)
+        ),
+        "kondo.anisotropy must be [1, 1, 1]": len(set(material.kondo.anisotropy)) > 1,
+        "magnetic_field.tesla must vanish": any(material.magnetic_field.tesla),
+    }
+    broken = [reason for reason, holds in reasons.items() if holds]
+    if broken:
+        raise InputError(
+            f"{material.name}: the reduced equations of the heavy Fermi liquid do not apply: {'; '.join(broken)}; "
+            'change this, or solve with search.phase = "heavy-fermi-liquid" in the so4 form and give the state file'
+        )

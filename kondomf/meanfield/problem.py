@@ -71,7 +71,7 @@ def point_at(problem: Problem, guess: Array, tolerance: float = CONSTRAINT_TOLER
     model = problem.model
     phi, state = _solve_multipliers(problem, guess, tolerance)
     bare = model.h + model.v @ state.p - phi
-    multipliers: Array = np.linalg.lstsq(model.c.T, -bare, rcond=None)[0]
+    multipliers = np.asarray(np.linalg.lstsq(model.c.T, -bare, rcond=None)[0], dtype=np.float64)
     error = model.c @ state.p - model.target
     free_energy = state.omega + (model.h - phi) @ state.p + state.p @ model.v @ state.p / 2 + multipliers @ error
     residual = np.zeros_like(phi)

@@ -20,12 +20,14 @@ from kondomf.oscillations.pole_sum import (
     pole_sum,
     unhybridized_frequency_T,
 )
+from kondomf.oscillations.predict import Prediction, predict
 
 __all__ = [
     "NO_BROADENING",
     "AmplitudeTable",
     "Broadening",
     "Harmonic",
+    "Prediction",
     "Trace",
     "amplitude_table",
     "dingle_broadening_meV",
@@ -40,6 +42,7 @@ __all__ = [
     "onsager_area_per_angstrom2",
     "onsager_frequency_T",
     "pole_sum",
+    "predict",
     "thermal_argument",
     "thermal_factor",
     "trace",

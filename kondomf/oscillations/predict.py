@@ -23,9 +23,9 @@ TRACE_HARMONICS = 10
 class Prediction:
     """Amplitudes over fields and temperatures, a trace over the same fields, and what sums them up.
 
-    frequency_T: of the unhybridized crossing, where pi k_B T or b dominates; low_temperature_frequencies_T: of the lines
-    where the hybridized bands cross the Fermi level; maximum_K (N_B,): temperature of the largest amplitude at each
-    field; departure (N_B,): largest |relative - lk_relative| of each field.
+    frequency_T: of the unhybridized crossing, where pi k_B T or b dominates; low_temperature_frequencies_T: of the
+    lines where the hybridized bands cross the Fermi level; maximum_K (N_B,): temperature of the largest amplitude at
+    each field; departure (N_B,): largest |relative - lk_relative| of each field.
     """
 
     model: FourBandModel
@@ -45,9 +45,10 @@ class Prediction:
 
     def rows(self) -> list[tuple[str, str]]:
         table = self.table
+        lines = ", ".join(f"{f:.6g} T" for f in self.low_temperature_frequencies_T)
         rows = [
             ("frequency", f"{self.frequency_T:.6g} T (unhybridized crossing)"),
-            ("as T goes to 0", ", ".join(f"{f:.6g} T" for f in self.low_temperature_frequencies_T) or "gap at mu: none"),
+            ("as T goes to 0", lines or "none: a gap at the Fermi level"),
             ("cyclotron mass", f"{table.mass:.5g} m_e (electrons without hybridization)"),
             ("harmonic", f"{table.harmonic} of the {table.observable.replace('_', ' ')}"),
         ]
@@ -96,7 +97,7 @@ def predict(
 ) -> Prediction:
     """Amplitudes at fields (tesla) and temperatures (kelvin), and a trace between the outer fields at the lowest one.
 
-    dingle_K: Dingle temperature of the electrons; the spinons stay sharp. A single field gives a trace of three periods.
+    dingle_K: Dingle temperature of the electrons; the spinons stay sharp. One field gives a trace of three periods.
     Raises InputError: a field or temperature not above zero, an unknown observable.
     """
     broadening = Broadening(electron_meV=float(dingle_broadening_meV(dingle_K)))

@@ -46,8 +46,11 @@ class BandStructure:
             ("state", self.name),
             ("gap", f"{self.gap_meV:.4g} meV"),
             ("band width", f"{self.bands.energy.max() - self.bands.energy.min():.6g} meV"),
-            ("states at the Fermi level", f"electrons {self.dos_electrons[at_zero]:.4g}, "
-             f"spinons {self.dos_spinons[at_zero]:.4g} per meV and cell (resolution {self.width_meV:.3g} meV)"),
+            (
+                "states at the Fermi level",
+                f"electrons {self.dos_electrons[at_zero]:.4g}, "
+                f"spinons {self.dos_spinons[at_zero]:.4g} per meV and cell (resolution {self.width_meV:.3g} meV)",
+            ),
         ]
 
     def to_dict(self) -> dict[str, Any]:

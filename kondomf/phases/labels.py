@@ -83,7 +83,7 @@ def _hybridized(solution: Solution, order: Order, gap: Gap) -> Label:
     # With the two spinons a cell holds 2n + 2 fermions: only at n = 1 can bands be filled without pairing.
     insulator_possible = abs(solution.filling - 1) < 1e-6
     paired = ratio > allowed.pairing or (gapped and not insulator_possible and ratio > NO_PAIRING)
-    name = INSULATOR if gapped else HEAVY
+    name = INSULATOR if gapped and insulator_possible else HEAVY
     if paired:
         name = ("triplet" if order.pairing[1] > order.pairing[0] else "singlet") + " superconductor"
     evidence = [

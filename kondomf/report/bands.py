@@ -27,7 +27,14 @@ def draw_bands(axes: "Axes", found: BandStructure) -> "PathCollection":
     x = np.broadcast_to(found.distance[:, None], energy.shape)
     inside = np.abs(energy) <= found.window_meV
     points = axes.scatter(
-        x[inside], energy[inside], c=found.bands.conduction[inside], s=2, cmap="cividis", vmin=0, vmax=1, rasterized=True
+        x[inside],
+        energy[inside],
+        c=found.bands.conduction[inside],
+        s=2,
+        cmap="cividis",
+        vmin=0,
+        vmax=1,
+        rasterized=True,
     )
     axes.axhline(0, color="0.6", linewidth=0.6, zorder=0)
     for corner in found.corners:

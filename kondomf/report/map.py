@@ -159,23 +159,23 @@ def draw_map(axes: "Axes", found: PhaseMap) -> None:
     )
     for i, name in enumerate(found.names):
         x, y = np.nonzero(found.phase == name)
-        style = {"marker": MARKERS[i % len(MARKERS)], "color": CYCLE[i % len(CYCLE)]}
-        axes.scatter(found.x[x], found.y[y], s=9, label=f"{name} ({len(x)})", **style)
+        color, marker = CYCLE[i % len(CYCLE)], MARKERS[i % len(MARKERS)]
+        axes.scatter(found.x[x], found.y[y], s=9, color=color, marker=marker, label=f"{name} ({len(x)})")
     bad = (found.status != "") & ~np.isin(found.status.astype(str), GOOD)
     if bad.any():
         x, y = np.nonzero(bad)
         axes.scatter(found.x[x], found.y[y], marker="x", s=40, color="black", label=f"no minimum ({len(x)})")
     axes.set_xlabel(axis_label(found.keys[0]))
     axes.set_ylabel(axis_label(found.keys[1]))
-    axes.figure.legend(loc="outside lower center", ncols=2, frameon=False, fontsize=8)  # type: ignore[union-attr]
+    axes.figure.legend(loc="outside lower center", ncols=2, frameon=False, fontsize=8)
 
 
 def draw_cuts(panels: "list[Axes]", found: PhaseMap) -> None:
     """F, hybridization and moments along the first axis, one line per cut."""
     for axes, (name, label) in zip(panels, CUTS, strict=True):
         for i, cut in enumerate(found.cuts):
-            style = {"marker": MARKERS[i % len(MARKERS)], "markersize": 3.5}
-            axes.plot(found.x, found.quantities[name][:, cut], label=f"{found.y[cut]:g}", **style)
+            values, marker = found.quantities[name][:, cut], MARKERS[i % len(MARKERS)]
+            axes.plot(found.x, values, marker=marker, markersize=3.5, label=f"{found.y[cut]:g}")
         axes.set_ylabel(label)
         axes.set_xlabel(axis_label(found.keys[0]))
     panels[0].legend(frameon=False, fontsize=8, title=axis_label(found.keys[1]))

@@ -15,7 +15,7 @@ FORMATS = (".png", ".pdf", ".svg")
 CYCLE = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
 """Colours of Nature Methods 8, 441 (2011), "Color blindness", in an order of our own."""
 
-_RC = {
+_RC: dict[str, Any] = {
     "font.size": 10,
     "axes.spines.top": False,
     "axes.spines.right": False,
@@ -42,7 +42,8 @@ def save_figure(path: Path, draw: Callable[["Figure"], Any], size: tuple[float, 
     from matplotlib.figure import Figure
 
     check_format(path)
-    with matplotlib.rc_context({**_RC, "axes.prop_cycle": cycler(color=CYCLE)}):
+    rc: Any = {**_RC, "axes.prop_cycle": cycler(color=CYCLE)}
+    with matplotlib.rc_context(rc):
         figure = Figure(figsize=size, layout="constrained")
         FigureCanvasAgg(figure)
         draw(figure)
