@@ -1,6 +1,6 @@
 """Install kondomf with its development tools and run the tests.
 
-    python3 scripts/test.py [options for pytest]
+python3 scripts/test.py [options for pytest]
 """
 
 import os
