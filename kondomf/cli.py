@@ -1,19 +1,18 @@
 """The commands: each parses its arguments, calls one function, prints. Heavy imports wait until a command runs."""
 
 import json
+import math
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
 from kondomf.errors import InputError
 from kondomf.files import refuse_existing, write_atomically
 
-if TYPE_CHECKING:
-    pass
-
+OBSERVABLES = ("magnetization", "grand_potential")
 EXIT_NUMERICS, EXIT_INPUT, EXIT_INTERRUPTED = 1, 2, 130
 
 FilePath = click.Path(path_type=Path)
@@ -51,6 +50,11 @@ class Group(click.Group):
             return super().invoke(ctx)
         except InputError as error:
             click.echo(f"error: {error}", err=True)
+            ctx.exit(EXIT_INPUT)
+        except OSError as error:
+            if error.filename is None:
+                raise
+            click.echo(f"error: {error.filename}: {error.strerror}; check its name, place and permissions", err=True)
             ctx.exit(EXIT_INPUT)
         except KeyboardInterrupt:
             click.echo("interrupted; nothing half-written was left", err=True)
@@ -154,9 +158,9 @@ def bands(
     from kondomf.report.style import save_figure
     from kondomf.report.tables import align
 
-    _refuse(overwrite, json_file, figure_file, data_file)
-    if window_meV is not None and not window_meV > 0:
-        raise InputError(f"--window {window_meV:g}: give an energy in meV above zero")
+    _refuse(overwrite, json_file, data_file, figure=figure_file)
+    if window_meV is not None and not 0 < window_meV < math.inf:
+        raise InputError(f"--window {window_meV:g}: give a finite energy in meV above zero")
     found = band_structure(load_state(state), points, grid, window_meV)
     if figure_file:
         save_figure(figure_file, lambda figure: draw_band_structure(figure, found), (7.0, 4.0), overwrite)
@@ -223,7 +227,7 @@ def map_(
     from kondomf.report.tables import LIMITS
     from kondomf.sweep import open_run
 
-    _refuse(overwrite, json_file, figure_file, data_file)
+    _refuse(overwrite, json_file, data_file, figure=figure_file)
     found = read_map(open_run(run), phase_class, cut)
     if figure_file:
         save_figure(figure_file, lambda figure: draw(figure, found), figure_size(found), overwrite)
@@ -263,9 +267,7 @@ def effective(ctx: click.Context, source: Path, window_meV: float, json_file: Pa
     "--temperatures", default="0.2:20:60", show_default=True, metavar="KELVIN", help="list, or FROM:TO:POINTS"
 )
 @click.option("--harmonic", type=click.IntRange(1), default=1, show_default=True)
-@click.option(
-    "--observable", type=click.Choice(["magnetization", "grand_potential"]), default="magnetization", show_default=True
-)
+@click.option("--observable", type=click.Choice(OBSERVABLES), default=OBSERVABLES[0], show_default=True)
 @click.option(
     "--dingle",
     type=click.FloatRange(0),
@@ -298,7 +300,7 @@ def oscillations(
     from kondomf.report.style import save_figure
     from kondomf.report.tables import LIMITS, align
 
-    _refuse(overwrite, json_file, figure_file, data_file)
+    _refuse(overwrite, json_file, data_file, figure=figure_file)
     found = predict(
         read_model(model),
         number_list("--fields", fields),
@@ -314,17 +316,64 @@ def oscillations(
     _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
 
 
+@main.command(epilog=example("kondomf fit amplitudes.csv --model model.json --figure fit.png"))
+@click.argument("amplitudes", type=FilePath)
+@click.option("--model", "model_file", type=FilePath, required=True, metavar="FILE", help="JSON written by effective")
+@click.option("--harmonic", type=click.IntRange(1), default=1, show_default=True)
+@click.option("--observable", type=click.Choice(OBSERVABLES), default=OBSERVABLES[0], show_default=True)
+@click.option("--common-scale", is_flag=True, help="all fields share one calibration; adds a Dingle temperature")
+@outputs("json", "figure", "data")
+@click.pass_context
+def fit(
+    ctx: click.Context,
+    amplitudes: Path,
+    model_file: Path,
+    harmonic: int,
+    observable: str,
+    common_scale: bool,
+    json_file: Path | None,
+    figure_file: Path | None,
+    data_file: Path | None,
+    overwrite: bool,
+) -> None:
+    """Do measured AMPLITUDES (CSV) favour Lifshitz-Kosevich or the hybridized model, and with which hybridization?
+
+    Columns: field_T, temperature_K, amplitude and, if known, amplitude_error. E_D, velocities and spinon level are
+    taken from the model; its hybridization is what is fitted.
+    """
+    from kondomf.effective import read_model
+    from kondomf.measured import fit_amplitudes, read_amplitudes
+    from kondomf.report.fit import draw_fit
+    from kondomf.report.style import save_figure
+    from kondomf.report.tables import LIMITS, align
+
+    _refuse(overwrite, json_file, figure_file, data_file)
+    model, data = read_model(model_file), read_amplitudes(amplitudes)
+    found = fit_amplitudes(data, model, observable=observable, harmonic=harmonic, common_scale=common_scale)
+    if figure_file:
+        save_figure(figure_file, lambda figure: draw_fit(figure, found), (7.0, 5.0), overwrite)
+    if data_file:
+        write_csv(data_file, found.columns(), overwrite)
+    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+    ctx.exit(0 if all(one.converged for one in found.fits) else EXIT_NUMERICS)
+
+
 def number_list(option: str, text: str) -> list[float]:
-    """Numbers "1,2,5" or "FROM:TO:POINTS" (evenly spaced). Raises InputError for anything else."""
+    """Numbers "1,2,5" or "FROM:TO:POINTS" (evenly spaced), all above zero. Raises InputError for anything else."""
     import numpy as np
 
+    numbers: list[float] = []
     try:
         if ":" in text:
             first, last, points = text.split(":")
-            return [float(x) for x in np.linspace(float(first), float(last), int(points))]
-        return [float(x) for x in text.split(",")]
+            numbers = [float(x) for x in np.linspace(float(first), float(last), int(points))]
+        else:
+            numbers = [float(x) for x in text.split(",")]
     except ValueError:
-        raise InputError(f"{option} {text!r}: give numbers like 10,15,20 or FROM:TO:POINTS like 0.2:20:60") from None
+        pass
+    if not numbers or not all(0 < number < math.inf for number in numbers):
+        raise InputError(f"{option} {text!r}: give numbers above zero like 10,15,20, or FROM:TO:POINTS like 0.2:20:60")
+    return numbers
 
 
 def write_csv(path: Path, columns: dict[str, Any], overwrite: bool) -> None:
@@ -340,22 +389,40 @@ def write_csv(path: Path, columns: dict[str, Any], overwrite: bool) -> None:
     write_atomically(path, write, overwrite=overwrite)
 
 
-def _refuse(overwrite: bool, *paths: Path | None) -> None:
-    """Refuse outputs that exist or cannot be written before anything is computed."""
-    for path in paths:
-        if path is not None and str(path) != "-":
-            refuse_existing(path, overwrite)
+def _refuse(overwrite: bool, *paths: Path | None, figure: Path | None = None) -> None:
+    """Refuse outputs that exist, coincide or cannot be written before anything is computed."""
+    from kondomf.report.style import check_format
+
+    if figure is not None:
+        check_format(figure)
+    given = [path for path in (*paths, figure) if path is not None and str(path) != "-"]
+    for path in given:
+        refuse_existing(path, overwrite)
+        if given.count(path) > 1:
+            raise InputError(f"{path} is named for two outputs; give each its own file")
 
 
 def _report(result: dict[str, Any], text: str, json_file: Path | None, overwrite: bool) -> None:
     """Print the table, and write the JSON to a file; "-" puts the JSON alone on standard output."""
-    document = json.dumps(result, indent=2, ensure_ascii=False, default=float)
+    document = json.dumps(_plain(result), indent=2, ensure_ascii=False, allow_nan=False)
     if json_file is not None and str(json_file) == "-":
         click.echo(document)
         return
     click.echo(text)
     if json_file is not None:
         write_atomically(json_file, lambda path: _write_text(path, document + "\n"), overwrite=overwrite)
+
+
+def _plain(value: Any) -> Any:
+    """What JSON can hold: numbers of numpy as Python's, NaN and infinities as null."""
+    if isinstance(value, dict):
+        return {key: _plain(entry) for key, entry in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(entry) for entry in value]
+    if value is None or isinstance(value, str | int):
+        return value
+    number = float(value)
+    return number if math.isfinite(number) else None
 
 
 def _write_text(path: Path, text: str) -> None:

@@ -10,9 +10,13 @@ from kondomf.errors import InputError
 
 def refuse_existing(path: Path, overwrite: bool) -> None:
     """Raise InputError if `path` exists and may not be replaced, or if its folder cannot take a new file."""
-    if path.is_dir():
+    try:
+        exists, is_folder = path.exists(), path.is_dir()
+    except OSError as error:
+        raise InputError(f"cannot write {path}: {error.strerror}; choose another name or folder") from None
+    if is_folder:
         raise InputError(f"{path} is a directory; give the name of a file")
-    if path.exists() and not overwrite:
+    if exists and not overwrite:
         raise InputError(f"{path} exists; choose another name or pass --overwrite to replace it")
     folder = path.parent
     if not folder.is_dir():

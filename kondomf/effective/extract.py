@@ -24,6 +24,8 @@ DIRAC_POINT = np.array([2 / 3, 1 / 3])
 """Dirac point in units of the reciprocal vectors; a1.k = 4 pi / 3, a2.k = 2 pi / 3."""
 LARGEST_PAIRING = 1e-8
 """Anomalous matrix elements above this, in units of the largest coupling, are no rounding errors."""
+NO_HYBRIDIZATION = 1e-9
+"""Correlators between spinons and electrons below this are rounding errors."""
 
 
 @dataclass(frozen=True)
@@ -68,6 +70,8 @@ def from_solution(solution: Solution) -> Extraction:
         raise InputError(
             'the four-band model needs a solution in the 1x1 cell; set mean_field.cell = "1x1" and solve again'
         )
+    if np.abs(solution.p[solution.model.hybridization]).max(initial=0.0) < NO_HYBRIDIZATION:
+        raise InputError("the solution has no hybridization: its spinons are decoupled, there is nothing to extract")
     a = material.spin_layer.lattice_constant_angstrom
     step = 1e-4
     k = DIRAC_POINT + np.array([[0.0, 0.0], [step, 0.0]])
@@ -82,8 +86,6 @@ def from_solution(solution: Solution) -> Extraction:
     identity = np.eye(2)
     electron, spinon = (_mean([at[s, i, s, i] for s in (0, 1)]) for i in (1, 0))
     b = _mean([at[s, 1, s, 0] for s in (0, 1)])
-    if b < 1e-9 * solution.model.scale:
-        raise InputError("the solution has no hybridization: its spinons are decoupled, there is nothing to extract")
     conduction, heavy = beside[0, 1, 1, 1], beside[0, 0, 1, 0]
     ratio = float((np.vdot(conduction, heavy) / np.vdot(conduction, conduction)).real)
     reciprocal = 2 * np.pi * np.linalg.inv(np.array([[1.0, 0.0], [0.5, np.sqrt(3) / 2]])).T / a

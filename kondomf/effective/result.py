@@ -76,7 +76,7 @@ def effective_model(source: Path, window_meV: float) -> EffectiveResult:
     """
     import h5py
 
-    if source.is_file() and (source.suffix in (".h5", ".hdf5") or h5py.is_hdf5(source)):
+    if source.suffix in (".h5", ".hdf5") or (source.is_file() and h5py.is_hdf5(source)):
         return _of_state(source, window_meV)
     return _of_material(load_material(source), window_meV)
 
@@ -84,7 +84,7 @@ def effective_model(source: Path, window_meV: float) -> EffectiveResult:
 def read_model(path: Path) -> FourBandModel:
     """Model of a JSON file that `effective --json` wrote.
 
-    Raises InputError: missing, not JSON, another kind or schema.
+    Raises InputError: missing, not JSON, another kind or schema, parameters that make no model.
     """
     try:
         document = json.loads(path.read_text(encoding="utf-8"))
@@ -94,12 +94,21 @@ def read_model(path: Path) -> FourBandModel:
         raise InputError(f"{path} is no model file: {error}; write one with: kondomf effective SOURCE --json") from None
     if not isinstance(document, dict) or (document.get("format"), document.get("schema")) != (FORMAT, SCHEMA):
         raise InputError(f"{path} is no model file of schema {SCHEMA}; write one with: kondomf effective SOURCE --json")
+    given = document.get("model")
+    given = given if isinstance(given, dict) else {}
     names = [field.name for field in fields(FourBandModel)]
-    missing = [name for name in names if name not in document.get("model", {})]
+    missing = [name for name in names if name not in given]
     if missing:
         raise InputError(f"{path} lacks {', '.join(missing)} in its model; write it again with kondomf effective")
-    values = {name: document["model"][name] for name in names}
-    return FourBandModel(**{**values, "notes": tuple(values["notes"])})
+    values = {name: given[name] for name in names}
+    for name in set(names) - {"source", "notes"}:
+        unset = name == "temperature_meV" and values[name] is None
+        if not (unset or isinstance(values[name], int | float)):
+            raise InputError(f"{path}: {name} = {values[name]!r} is no number; write it again with kondomf effective")
+    try:
+        return FourBandModel(**{**values, "source": str(values["source"]), "notes": tuple(map(str, values["notes"]))})
+    except (TypeError, InputError) as error:
+        raise InputError(f"{path} holds no model: {error}; write it again with kondomf effective") from None
 
 
 def _of_state(path: Path, window_meV: float) -> EffectiveResult:
@@ -158,7 +167,7 @@ def _check_isotropic(material: Material) -> None:
         "the conduction layer must have nearest-neighbour hopping alone": any(
             (electrons.next_hopping_meV, electrons.sublattice_offset_meV, electrons.kane_mele_meV, electrons.rashba_meV)
         ),
-        "kondo.anisotropy must be [1, 1, 1]": len(set(material.kondo.anisotropy)) > 1,
+        "kondo.anisotropy must be [1, 1, 1]": set(material.kondo.anisotropy) != {1.0},
         "magnetic_field.tesla must vanish": any(material.magnetic_field.tesla),
     }
     broken = [reason for reason, holds in reasons.items() if holds]

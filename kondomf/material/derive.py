@@ -100,7 +100,8 @@ def table(derived: Derived) -> list[tuple[str, str]]:
         ("level spacing of the zone grid", f"{derived.level_spacing_meV:.4g} meV"),
     ]
     for name, energy in derived.energy_scales_meV.items():
-        rows.append((f"energy scale: {name.replace('_', ' ')}", f"{energy:.4g} meV = {derived.energy_scales_K[name]:.4g} K"))
+        text = f"{energy:.4g} meV = {derived.energy_scales_K[name]:.4g} K"
+        rows.append((f"energy scale: {name.replace('_', ' ')}", text))
     rows.append(("distance of the K points of both layers", f"{derived.valley_shift_per_angstrom:.4g} /angstrom"))
     cell = derived.commensurate_cell
     if cell is None:

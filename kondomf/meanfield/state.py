@@ -55,6 +55,8 @@ def load_state(path: Path) -> Solution:
     """
     import h5py
 
+    if path.is_dir():
+        raise InputError(f"{path} is a directory; give the state file that kondomf solve MATERIAL --state wrote")
     if not path.is_file():
         raise InputError(f"no state file {path}; write one with: kondomf solve MATERIAL --state {path}")
     try:
@@ -69,7 +71,7 @@ def load_state(path: Path) -> Solution:
             channels = np.array(file["channels"])
             inputs = json.loads(file.attrs["inputs"])
             evidence: dict[str, Any] = json.loads(file.attrs["evidence"])
-    except (OSError, KeyError, RuntimeError, json.JSONDecodeError) as error:
+    except (OSError, KeyError, RuntimeError, TypeError, json.JSONDecodeError) as error:
         raise InputError(
             f"{path} cannot be read as a state file (truncated or not HDF5): {error}; "
             "solve the material again with --state"
@@ -78,12 +80,17 @@ def load_state(path: Path) -> Solution:
     model = build_model(material)
     if not np.array_equal(channels, model.table):
         raise InputError(f"{path} was written for other channels than this version builds; solve the material again")
-    evidence["trials"] = tuple(Trial(**trial) for trial in evidence["trials"])
-    evidence["history"] = tuple(tuple(entry) for entry in evidence["history"])
-    evidence["curvatures"] = tuple(evidence["curvatures"])
-    evidence["zero_modes"] = ZeroModes(**evidence["zero_modes"]) if evidence["zero_modes"] else None
     zone = uniform(material.zone.points, material.zone.offset)
-    return Solution(model=model, zone=zone, inputs=inputs, **arrays, **evidence)
+    try:
+        evidence["trials"] = tuple(Trial(**trial) for trial in evidence["trials"])
+        evidence["history"] = tuple(tuple(entry) for entry in evidence["history"])
+        evidence["curvatures"] = tuple(evidence["curvatures"])
+        evidence["zero_modes"] = ZeroModes(**evidence["zero_modes"]) if evidence["zero_modes"] else None
+        return Solution(model=model, zone=zone, inputs=inputs, **arrays, **evidence)
+    except (KeyError, TypeError) as error:
+        raise InputError(
+            f"{path} holds other evidence than this version reads ({error}); solve the material again with --state"
+        ) from None
 
 
 def _description(found: tuple[str, int]) -> str:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from kondomf.errors import InputError
 from kondomf.report.style import CYCLE
 from kondomf.report.tables import align
-from kondomf.sweep import Run
+from kondomf.sweep import FAILED, Run
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -26,11 +26,13 @@ CUTS = (
 )
 """Quantities of a line cut and their labels."""
 GOOD = ("minimum", "minimum-in-class")
+UNITS = {"meV": "meV", "K": "K", "angstrom": "Å", "degree": "degree", "per_cm2": "1/cm²"}
+"""Unit at the end of a key, and how a person writes it."""
 
 
 @dataclass(frozen=True)
 class PhaseMap:
-    """Phases and statuses (Nx, Ny) of one class of a run at x (Nx,), y (Ny,), and the cuts asked for.
+    """Phases and statuses (Nx, Ny) of one class of a run at ascending x (Nx,), y (Ny,), and the cuts asked for.
 
     quantities: arrays (Nx, Ny) by name; cuts: indices along y. Points without a result are "" and NaN.
     """
@@ -77,10 +79,10 @@ class PhaseMap:
                 f"{axis_label(key)} {values[index].min():g} to {values[index].max():g}"
                 for key, values, index in zip(self.keys, (self.x, self.y), (i, j), strict=True)
             )
-            rows.append((name, f"{len(i)} points, {ranges}"))
+            rows.append((name, f"{_points(len(i))}, {ranges}"))
         bad = (self.status != "") & ~np.isin(self.status.astype(str), GOOD)
-        rows.append(("no minimum", f"{bad.sum()} points"))
-        rows.append(("not computed yet", f"{(self.status == '').sum()} points"))
+        rows.append(("no minimum", _points(int(bad.sum()))))
+        rows.append(("not computed yet", _points(int((self.status == "").sum()))))
         return align(rows)
 
 
@@ -90,23 +92,25 @@ def read_map(run: Run, phase_class: str | None, cuts: tuple[str, ...] = ()) -> P
     Raises InputError: no such class, not two axes, or a cut along another key.
     """
     if len(run.axes) != 2:
-        raise InputError(f"{run.folder} has {len(run.axes)} axes; a map needs two")
+        axes = ", ".join(axis.key for axis in run.axes)
+        raise InputError(f"{run.folder} is swept along {axes}; a map needs exactly two axes")
     name = phase_class or run.phases[0]
     status = run.status(name)
-    if not (status != "").any():
+    if np.isin(status.astype(str), ("", FAILED)).all():
         raise InputError(f"{run.folder} holds no finished point of class {name} yet; look at it with: kondomf progress")
     one, two = run.axes
-    quantities = {key: np.asarray(run.quantity(name, key), dtype=float) for key, _ in CUTS}
-    y = np.array(two.values)
+    order = np.ix_(np.argsort(one.values), np.argsort(two.values))
+    quantities = {key: np.asarray(run.quantity(name, key), dtype=float)[order] for key, _ in CUTS}
+    y = np.sort(two.values)
     indices = tuple(_cut_index(text, two.key, y) for text in cuts)
     return PhaseMap(
         name=str(run.material["name"]),
         phase_class=name,
         keys=(one.key, two.key),
-        x=np.array(one.values),
+        x=np.sort(one.values),
         y=y,
-        phase=run.quantity(name, "phase"),
-        status=status,
+        phase=run.quantity(name, "phase")[order],
+        status=status[order],
         quantities=quantities,
         cuts=indices,
     )
@@ -117,7 +121,9 @@ def _cut_index(text: str, key: str, values: Array) -> int:
     try:
         number = float(value)
     except ValueError:
-        raise InputError(f"--cut {text!r}: give KEY=VALUE, for instance {key}={values[len(values) // 2]:g}") from None
+        number = math.nan
+    if not math.isfinite(number):
+        raise InputError(f"--cut {text!r}: give KEY=VALUE, for instance {key}={values[len(values) // 2]:g}")
     if name != key:
         raise InputError(f"--cut {text!r}: cuts run along the first axis; fix a value of the second, {key}")
     return int(np.abs(values - number).argmin())
@@ -126,10 +132,10 @@ def _cut_index(text: str, key: str, values: Array) -> int:
 def axis_label(key: str) -> str:
     """What people call a swept key: its last part, with the unit in brackets."""
     section, name = key.split(".")[0], key.split(".")[-1]
-    unit = next((unit for unit in ("meV", "K", "angstrom", "degree") if name.endswith(f"_{unit}")), None)
+    unit = next((unit for unit in UNITS if name.endswith(f"_{unit}")), None)
     words = (name.removesuffix(f"_{unit}") if unit else name).replace("_", " ")
     words = f"Kondo {words}" if section == "kondo" else words
-    return f"{words} ({unit})" if unit else words
+    return f"{words} ({UNITS[unit]})" if unit else words
 
 
 def figure_size(found: PhaseMap) -> tuple[float, float]:
@@ -154,9 +160,8 @@ def draw_map(axes: "Axes", found: PhaseMap) -> None:
     for i, name in enumerate(found.names):
         number[found.phase == name] = i
     colors = [_pale(CYCLE[i % len(CYCLE)]) for i in range(len(found.names))]
-    axes.pcolormesh(
-        found.x, found.y, number.T, cmap=ListedColormap(colors), vmin=-0.5, vmax=len(colors) - 0.5, shading="nearest"
-    )
+    x_edges, y_edges = _edges(found.x), _edges(found.y)
+    axes.pcolormesh(x_edges, y_edges, number.T, cmap=ListedColormap(colors), vmin=-0.5, vmax=len(colors) - 0.5)
     for i, name in enumerate(found.names):
         x, y = np.nonzero(found.phase == name)
         color, marker = CYCLE[i % len(CYCLE)], MARKERS[i % len(MARKERS)]
@@ -179,6 +184,18 @@ def draw_cuts(panels: "list[Axes]", found: PhaseMap) -> None:
         axes.set_ylabel(label)
         axes.set_xlabel(axis_label(found.keys[0]))
     panels[0].legend(frameon=False, fontsize=8, title=axis_label(found.keys[1]))
+
+
+def _edges(values: Array) -> Array:
+    """Borders (N + 1,) of the cells around ascending grid values (N,); a single value gets a cell of width 1."""
+    if len(values) == 1:
+        return values[0] + np.array([-0.5, 0.5])
+    middle = (values[1:] + values[:-1]) / 2
+    return np.concatenate([[2 * values[0] - middle[0]], middle, [2 * values[-1] - middle[-1]]])
+
+
+def _points(count: int) -> str:
+    return f"{count} point" if count == 1 else f"{count} points"
 
 
 def _pale(color: str) -> tuple[float, float, float]:

@@ -23,10 +23,10 @@ def solution_table(summary: dict[str, Any]) -> str:
     rows += [("", f"- {text}") for text in summary["phase_evidence"][:3]]
     rows += [
         ("status", f"{summary['status']}: {summary['message']}"),
-        ("free energy", f"{summary['free_energy_meV_per_cell']:.6f} meV per cell"),
-        ("entropy", f"{summary['entropy_kB_per_cell']:.6f} k_B per cell"),
+        ("free energy", f"{_fixed(summary['free_energy_meV_per_cell'], 6)} meV per cell"),
+        ("entropy", f"{_fixed(summary['entropy_kB_per_cell'], 6)} k_B per cell"),
         ("filling", f"{summary['filling']:.8f} electrons per conduction site"),
-        ("chemical potential", f"{summary['chemical_potential_meV']:.6f} meV"),
+        ("chemical potential", f"{_fixed(summary['chemical_potential_meV'], 6)} meV"),
         ("hybridization", "; ".join(_numbers(site) for site in summary["hybridization_singular_values"])),
         ("spin moments", "; ".join(_numbers(site) for site in summary["spin_moment"])),
         ("electron moments", "; ".join(_numbers(site) for site in summary["electron_moment"])),
@@ -37,9 +37,9 @@ def solution_table(summary: dict[str, Any]) -> str:
         ("zone error", f"{summary['zone_error_meV']:.1e} meV per cell (grid doubled)"),
     ]
     if summary["curvature_min"] is not None:
-        rows.append(("lowest curvature", f"{summary['curvature_min']:.6f}"))
+        rows.append(("lowest curvature", _fixed(summary["curvature_min"], 6)))
     if summary["phase_class"] != "any" and summary["curvature_full_space"] is not None:
-        rows.append(("outside the class", f"lowest curvature {summary['curvature_full_space']:.6f}"))
+        rows.append(("outside the class", f"lowest curvature {_fixed(summary['curvature_full_space'], 6)}"))
     if zero is not None:
         text = f"{zero['count']}: {zero['broken_generators']} broken generators, {zero['gauge_directions']} gauge"
         rows.append(("zero modes", text + (f", {zero['unexplained']} unexplained" if zero["unexplained"] else "")))
@@ -56,5 +56,9 @@ def _trials(summary: dict[str, Any]) -> str:
 
 
 def _numbers(values: Sequence[float]) -> str:
-    """Four digits each; -0 and rounding dust become 0."""
-    return " ".join(f"{0.0 if abs(value) < 5e-5 else value:.4f}" for value in values)
+    return " ".join(_fixed(value, 4) for value in values)
+
+
+def _fixed(value: float, digits: int) -> str:
+    """So many digits after the point; -0 and rounding dust become 0."""
+    return f"{round(value, digits) + 0.0:.{digits}f}"

@@ -1,25 +1,30 @@
 """Which points, in which order, on which workers, stored how?"""
 
-from kondomf.sweep.plan import Axis, SweepPlan, load_sweep
-from kondomf.sweep.product import compare_products
-from kondomf.sweep.progress import console_progress
-from kondomf.sweep.read import Run, RunSummary, open_run, progress_text
-from kondomf.sweep.record import FAILED, PointRecord, PointResult
-from kondomf.sweep.run import RunOutcome, run_sweep
+from importlib import import_module
+from typing import Any
 
-__all__ = [
-    "FAILED",
-    "Axis",
-    "PointRecord",
-    "PointResult",
-    "Run",
-    "RunOutcome",
-    "RunSummary",
-    "SweepPlan",
-    "compare_products",
-    "console_progress",
-    "load_sweep",
-    "open_run",
-    "progress_text",
-    "run_sweep",
-]
+_PUBLIC = {
+    "load_sweep": "plan",
+    "SweepPlan": "plan",
+    "compare_products": "product",
+    "console_progress": "progress",
+    "open_run": "read",
+    "progress_text": "read",
+    "Run": "read",
+    "RunSummary": "read",
+    "Axis": "record",
+    "FAILED": "record",
+    "PointRecord": "record",
+    "PointResult": "record",
+    "run_sweep": "run",
+    "RunOutcome": "run",
+}
+"""Public names and where they live; imported on first use, so that processes that need a part of it start fast."""
+
+__all__ = [*_PUBLIC]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _PUBLIC:
+        raise AttributeError(f"module 'kondomf.sweep' has no attribute {name!r}")
+    return getattr(import_module(f"kondomf.sweep.{_PUBLIC[name]}"), name)

@@ -148,6 +148,9 @@ def _start_cluster(workers: int) -> tuple[Any, Any]:
         "distributed.scheduler.worker-ttl": "2 hours",  # a kernel may hold the interpreter lock for long
         "distributed.nanny.environ.NUMBA_NUM_THREADS": 1,
     }
+    # For good: connections that end late would speak up after the cluster has closed and lifted its own silence.
+    for handler in logging.getLogger("distributed").handlers:
+        handler.setLevel(logging.CRITICAL)
     with dask.config.set(settings):
         cluster = LocalCluster(
             n_workers=workers,
@@ -161,7 +164,8 @@ def _start_cluster(workers: int) -> tuple[Any, Any]:
 
 
 def _begun(dask_worker: Any) -> list[str]:
-    return [task.key for task in dask_worker.state.executing]
+    tasks = dask_worker.state.tasks.values()
+    return [task.key for task in tasks if task.state in ("executing", "memory")]  # running, or done but not yet told
 
 
 @contextmanager

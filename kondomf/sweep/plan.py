@@ -15,20 +15,12 @@ import numpy as np
 
 from kondomf.errors import InputError
 from kondomf.material import Material, load_material, material_from_dict, with_value
-from kondomf.sweep.record import PointKey
+from kondomf.sweep.record import Axis, PointKey
 
 PHASES = ("any", "decoupled", "paramagnetic", "heavy-fermi-liquid", "magnetic")
 """Classes inside which a point can be minimised."""
 
 Index = tuple[int, ...]
-
-
-@dataclass(frozen=True)
-class Axis:
-    """One swept key of the material (dotted name, unit at its end) and its values in the order they are visited."""
-
-    key: str
-    values: tuple[float, ...]
 
 
 @dataclass(frozen=True)

@@ -13,10 +13,9 @@ from numpy.typing import NDArray
 
 from kondomf.errors import InputError
 from kondomf.sweep.folder import RECORD, Header, read_header, working_process
-from kondomf.sweep.plan import Axis
 from kondomf.sweep.product import stack
 from kondomf.sweep.progress import state_text
-from kondomf.sweep.record import FAILED, PointRecord
+from kondomf.sweep.record import FAILED, Axis, PointRecord
 from kondomf.sweep.store import SqliteStore
 
 

@@ -15,6 +15,14 @@ Arrays = dict[str, NDArray[Any]]
 _UNIT = re.compile(r"(?:^|[._])(?P<unit>meV|K|T|tesla|kB|angstrom|degree|seconds)?(?P<per>_?per_[a-zA-Z0-9]+)?$")
 
 
+@dataclass(frozen=True)
+class Axis:
+    """One swept key of the material (dotted name, unit at its end) and its values in the order they are visited."""
+
+    key: str
+    values: tuple[float, ...]
+
+
 @dataclass(frozen=True, order=True)
 class PointKey:
     """Address of a point: phase class and one index per axis."""
