@@ -159,8 +159,7 @@ def bands(
     from kondomf.report.tables import align
 
     _refuse(overwrite, json_file, data_file, figure=figure_file)
-    if window_meV is not None and not 0 < window_meV < math.inf:
-        raise InputError(f"--window {window_meV:g}: give a finite energy in meV above zero")
+    _check_window(window_meV)
     found = band_structure(load_state(state), points, grid, window_meV)
     if figure_file:
         save_figure(figure_file, lambda figure: draw_band_structure(figure, found), (7.0, 4.0), overwrite)
@@ -253,6 +252,7 @@ def effective(ctx: click.Context, source: Path, window_meV: float, json_file: Pa
     from kondomf.report.tables import LIMITS, align
 
     _refuse(overwrite, json_file)
+    _check_window(window_meV)
     found = effective_model(source, window_meV)
     _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
     ctx.exit(0 if found.converged else EXIT_NUMERICS)
@@ -400,6 +400,11 @@ def _refuse(overwrite: bool, *paths: Path | None, figure: Path | None = None) ->
         refuse_existing(path, overwrite)
         if given.count(path) > 1:
             raise InputError(f"{path} is named for two outputs; give each its own file")
+
+
+def _check_window(window_meV: float | None) -> None:
+    if window_meV is not None and not 0 < window_meV < math.inf:
+        raise InputError(f"--window {window_meV:g}: give a finite energy in meV above zero")
 
 
 def _report(result: dict[str, Any], text: str, json_file: Path | None, overwrite: bool) -> None:

@@ -20,7 +20,10 @@ def refuse_existing(path: Path, overwrite: bool) -> None:
         raise InputError(f"{path} exists; choose another name or pass --overwrite to replace it")
     folder = path.parent
     if not folder.is_dir():
-        raise InputError(f"cannot write {path}: the folder {folder} does not exist; create it first")
+        problem = (
+            "is a file, not a folder; choose another one" if folder.exists() else "does not exist; create it first"
+        )
+        raise InputError(f"cannot write {path}: {folder} {problem}")
     if not os.access(folder, os.W_OK):
         raise InputError(f"cannot write {path}: no permission to write in {folder}; choose another folder")
 
@@ -47,7 +50,9 @@ def write_atomically(path: Path, write: Callable[[Path], None], *, overwrite: bo
         os.chmod(temporary, 0o666 & ~_umask())
         os.replace(temporary, path)
     except OSError as error:
-        raise InputError(f"cannot write {path}: {error}; free space or choose another folder") from error
+        raise InputError(
+            f"cannot write {path}: {error.strerror or error}; free space or choose another folder"
+        ) from error
     finally:
         temporary.unlink(missing_ok=True)
 

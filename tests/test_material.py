@@ -145,7 +145,7 @@ def test_numpy_numbers_become_plain_numbers():
     material = with_value(build(), "kondo.coupling_meV", np.float64(3))
     assert type(material.to_dict()["kondo"]["coupling_meV"]) is float
     assert with_value(build(), "magnetic_field.tesla", np.array([1, 2, 3])).magnetic_field.tesla == (1, 2, 3)
-    assert with_value(build(), "zone.points", np.int64(3)).zone.points == 3
+    assert with_value(build(), "zone.points", np.int64(4)).zone.points == 4
 
 
 @given(st.floats(0.01, 1.99), st.floats(-1e4, 1e4), st.lists(st.floats(-10, 10), min_size=3, max_size=3))
@@ -184,7 +184,7 @@ def test_grid_points_on_an_axis_of_real_numbers_are_whole_numbers():
 def test_every_numeric_key_can_be_set_and_others_cannot():
     for key in NUMERIC_KEYS:
         section, name = key.split(".")
-        value: Any = [1.0, 1.0, 1.0] if name in ("anisotropy", "tesla") else 1
+        value: Any = {"anisotropy": [1.0, 1.0, 1.0], "tesla": [1.0, 1.0, 1.0], "points": 2}.get(name, 1)
         assert getattr(getattr(with_value(build(), key, value), section), name) is not None
     for key in ("name", "search.phase", "mean_field.cell", "mean_field.magnetic_channel", "kondo", "a.b.c", ""):
         with pytest.raises(InputError, match="no numeric key"):
@@ -227,8 +227,15 @@ def test_a_bool_a_string_nan_and_an_endless_number_are_no_numbers(key, value, sh
 @pytest.mark.parametrize("key", POSITIVE)
 @pytest.mark.parametrize("value", [0, -1])
 def test_a_positive_quantity_refuses_zero_and_negative_values(key, value):
-    with pytest.raises(InputError, match=shows(key, str(value)) + ".*; give .*(above 0|at least 1)"):
+    with pytest.raises(InputError, match=shows(key, str(value)) + ".*; give .*(above 0|at least 1|even whole number)"):
         with_value(build(), key, value)
+
+
+@pytest.mark.parametrize("points", [1, 25])
+def test_an_odd_number_of_grid_points_is_refused(points):
+    """The gauge copies of a decoupled state have the same F only on grids that half a period maps onto themselves."""
+    with pytest.raises(InputError, match=f"zone.points = {points}: not an even number.*; give"):
+        with_value(build(), "zone.points", points)
 
 
 @pytest.mark.parametrize("value", [0, 2, -0.1, 2.1, float("inf")])

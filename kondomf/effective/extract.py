@@ -71,7 +71,10 @@ def from_solution(solution: Solution) -> Extraction:
             'the four-band model needs a solution in the 1x1 cell; set mean_field.cell = "1x1" and solve again'
         )
     if np.abs(solution.p[solution.model.hybridization]).max(initial=0.0) < NO_HYBRIDIZATION:
-        raise InputError("the solution has no hybridization: its spinons are decoupled, there is nothing to extract")
+        raise InputError(
+            "the solution has no hybridization: its spinons are decoupled, there is nothing to extract; raise "
+            'kondo.coupling_meV, or set search.phase = "heavy-fermi-liquid" in the so4 form, and solve again'
+        )
     a = material.spin_layer.lattice_constant_angstrom
     step = 1e-4
     k = DIRAC_POINT + np.array([[0.0, 0.0], [step, 0.0]])

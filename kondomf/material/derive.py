@@ -163,7 +163,7 @@ def _warnings(material: Material) -> Iterator[str]:
     yield from _form_warnings(material)
     spacing, temperature = _level_spacing(material), material.temperature_meV
     if temperature < THERMAL_RESOLUTION * spacing:
-        needed = int(np.ceil(material.zone.points * THERMAL_RESOLUTION * spacing / temperature))
+        needed = 2 * int(np.ceil(material.zone.points * THERMAL_RESOLUTION * spacing / temperature / 2))
         yield (
             f"temperature {temperature:.3g} meV is small against the level spacing {spacing:.3g} meV of the zone grid: "
             f"fine Fermi-surface features are not resolved; raise the temperature or zone.points (to about {needed})"

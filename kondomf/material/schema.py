@@ -5,7 +5,16 @@ from typing import Annotated, Any, Literal, Self
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, StrictStr, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    StrictBool,
+    StrictStr,
+    model_validator,
+)
 
 from kondomf.material import honeycomb
 from kondomf.units import BOLTZMANN
@@ -66,6 +75,12 @@ def _cell(value: Any) -> str | tuple[tuple[int, int], tuple[int, int]]:
     if determinant < 0:
         raise ValueError(f"left-handed (determinant {determinant}); swap the two rows")
     return (a, b), (c, d)
+
+
+def _even(value: int) -> int:
+    if value < 2 or value % 2:
+        raise ValueError("not an even number of at least 2")
+    return value
 
 
 def _method(value: Any) -> Any:
@@ -188,7 +203,9 @@ class Zone(Section):
 
     method: Annotated[Literal["uniform"], BeforeValidator(_method)] = Field("uniform", description='"uniform"')
     tolerance_meV: Number = Field(1e-3, gt=0, description="the error of F per cell in meV, above 0")
-    points: WholeNumber = Field(24, ge=1, description="the grid points per direction, a whole number of at least 1")
+    points: Annotated[WholeNumber, AfterValidator(_even)] = Field(
+        24, description="the grid points per direction, an even whole number (the gauge copies need half a period)"
+    )
     offset: Literal["c3", "midpoint"] = Field(
         "c3", description='"c3" (offset 1/3, 2/3; keeps threefold symmetry) or "midpoint" (1/2, 1/2; breaks it)'
     )

@@ -6,12 +6,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.meanfield.evaluate import response
-from kondomf.meanfield.problem import Point, Problem
+from kondomf.meanfield.problem import Point, Problem, point_at
 
 Array = NDArray[np.float64]
 
 NULL = 1e-13
 """Directions whose response is below this fraction of the largest do not change the state: curvature 1."""
+
+FROZEN = 1e-6
+"""A constrained quantity that responds by less than this fraction (of a root of the response) needs no projection."""
 
 
 @dataclass(frozen=True)
@@ -53,11 +56,15 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
     basis = None if full_space else problem.basis
     if basis is not None:
         m, c = basis.T @ m @ basis, c @ basis
-    mc = m @ c.T
-    m = m - mc @ np.linalg.pinv(c @ mc, rcond=1e-12, hermitian=True) @ mc.T
     size, q = np.linalg.eigh((m + m.T) / 2)
-    keep = size > NULL * max(size.max(initial=0.0), 1e-300)
+    largest = max(size.max(initial=0.0), 1e-300)
+    keep = size > NULL * largest
     r = q[:, keep] * np.sqrt(size[keep])
+    # (C M C^T)^-1 loses all digits where a constrained quantity is frozen (a gap at low T): the same projection on
+    # orthonormal directions of r^T C^T leaves out those that are rounding noise.
+    u, sizes, _ = np.linalg.svd(r.T @ c.T, full_matrices=False)
+    u = u[:, sizes > FROZEN * np.sqrt(largest)]
+    r = r - (r @ u) @ u.T
     if basis is not None:
         r = basis @ r
     eigenvalues, z = np.linalg.eigh(np.eye(r.shape[1]) + r.T @ v @ r)
@@ -65,11 +72,8 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
 
 
 def gauge_copies(problem: Problem, point: Point) -> list[Point]:
-    """The other three gauge copies of a decoupled point: the same state, which sees other uniform hybridizations."""
-    from dataclasses import replace
+    """The other three gauge copies of a decoupled point: the same state, which sees other uniform hybridizations.
 
-    copies = []
-    for signs in problem.model.gauge_signs[1:]:
-        state = problem.evaluate(signs * point.phi)
-        copies.append(replace(point, phi=signs * point.phi, state=state, residual=signs * point.residual))
-    return copies
+    Their F agree only on a zone rule with shifts by half a reciprocal vector (even points), so each is evaluated anew.
+    """
+    return [point_at(problem, signs * point.phi) for signs in problem.model.gauge_signs[1:]]

@@ -144,7 +144,8 @@ def _trial(problem: Problem, point: Point, step: Step, change: Array, memory: An
         if not corrected.free_energy < trial.free_energy:
             break
         trial = corrected
-    return trial
+    # Where the constrained quantities hardly respond, the second order is not small: F is compared without it.
+    return point_at(problem, trial.phi) if trial.is_finite and trial.constraint_error > CONSTRAINT_TOLERANCE else trial
 
 
 def _moved(problem: Problem, point: Point, change: Array, tolerance: float) -> Point:

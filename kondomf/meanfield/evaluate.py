@@ -11,6 +11,8 @@ from kondomf.model import MeanFieldModel
 Array = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
+HUGE = 1e100
+"""Levels above this many k_B T belong to no solution, and their squares would overflow."""
 CHUNK = 4096
 """Wave vectors worked on at a time; bounds the memory."""
 BLOCK = 2**17
@@ -58,7 +60,10 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
     for start in range(0, len(zone.k), CHUNK):
         part = slice(start, start + CHUNK)
         phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
-        e, u = np.linalg.eigh(bloch_matrix(model, phi, phases))
+        h = bloch_matrix(model, phi, phases)
+        if not np.abs(h).max() < HUGE * t:  # also catches NaN, on which eigh would raise
+            return _undefined(model)
+        e, u = np.linalg.eigh(h)
         x = np.abs(e) / (2 * t)
         log_cosh = x + np.log1p(np.exp(-2 * x))
         tanh = np.tanh(e / (2 * t))
@@ -71,6 +76,13 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
             kept.append((part, e, u))
     correlators = -real_space.reshape(-1, n, n).imag
     return Evaluation(omega, entropy, correlators[model.position], correlators, tuple(kept))
+
+
+def _undefined(model: MeanFieldModel) -> Evaluation:
+    """What fields without a usable Bloch matrix give: not a number throughout."""
+    n = model.n_majorana
+    correlators = np.full((len(model.lattice_vectors), n, n), np.nan)
+    return Evaluation(np.nan, np.nan, correlators[model.position], correlators, ())
 
 
 def thermal_weight(e: Array, t: float) -> Array:

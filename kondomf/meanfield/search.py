@@ -58,7 +58,7 @@ def solve(
     fine = Problem(model, zone, basis)
     coarse = fine
     if material.zone.points >= COARSE_FROM:
-        coarse = Problem(model, uniform(material.zone.points // 2, material.zone.offset), basis)
+        coarse = Problem(model, uniform(2 * (material.zone.points // 4), material.zone.offset), basis)
     ends = _descend_all(coarse, chosen, settings, progress)
     trials = tuple(_trial(model, end) for end in ends)
     if coarse is not fine:

@@ -61,7 +61,7 @@ def load_state(path: Path) -> Solution:
         raise InputError(f"no state file {path}; write one with: kondomf solve MATERIAL --state {path}")
     try:
         with h5py.File(path, "r") as file:
-            found = (str(file.attrs.get("format", "")), int(file.attrs.get("schema", 0)))
+            found = (str(file.attrs.get("format", "")), file.attrs.get("schema", 0))
             if found != (FORMAT, SCHEMA):
                 raise InputError(
                     f"{path} is {_description(found)}; this version reads state files of schema {SCHEMA}: "
@@ -93,6 +93,6 @@ def load_state(path: Path) -> Solution:
         ) from None
 
 
-def _description(found: tuple[str, int]) -> str:
+def _description(found: tuple[str, object]) -> str:
     name, schema = found
     return f"a {name} file of schema {schema}" if name else "an HDF5 file of another kind"

@@ -184,20 +184,21 @@ def trust_region_minimum(eigenvalues: Array, gradient: Array, radius: float, flo
     if not len(eigenvalues):
         return gradient, floor
     lowest = float(eigenvalues.min())
-    nu = max(floor, floor - lowest)
+    above = eigenvalues - lowest  # the shift is sought as the distance d > 0 from -lowest, which keeps its digits
+    least = floor + max(lowest, 0.0)
 
-    def length(shift: float) -> float:
-        return float(np.linalg.norm(gradient / (eigenvalues + shift)))
+    def length(d: float) -> float:
+        return float(np.linalg.norm(gradient / (above + d)))
 
-    if length(nu) > radius:
-        low, high = nu, nu + float(np.linalg.norm(gradient)) / radius + abs(lowest)
+    if length(least) > radius:
+        low, high = least, least + float(np.linalg.norm(gradient)) / radius
         while high - low > 1e-6 * high:
             middle = float(np.sqrt(low * high))
             low, high = (middle, high) if length(middle) > radius else (low, middle)
-        return -gradient / (eigenvalues + high), float(high)
-    y = -gradient / (eigenvalues + nu)
+        return -gradient / (above + high), high - lowest
+    y = -gradient / (above + least)
     if lowest < -floor:
         i = int(eigenvalues.argmin())
         rest = float(np.linalg.norm(np.delete(y, i)))
         y[i] = np.copysign(np.sqrt(max(radius**2 - rest**2, 0.0)), y[i])
-    return y, nu
+    return y, least - lowest

@@ -1,4 +1,4 @@
-"""The loop of a session: hand out points whose parent is committed, commit what comes back, end in good order."""
+"""The loop of a launch: hand out points whose parent is committed, commit what comes back, end in good order."""
 
 import heapq
 import time
@@ -34,7 +34,7 @@ class Driver:
     """Owns order, attempts and commits. Only the plan says who starts from whom, so results depend on nothing else.
 
     should_stop: asked before points are handed out. housekeep: called every ten minutes; returns a reason to end the
-    session, or None. After `run`, `stopped` tells whether should_stop ended it with work left, `problem` what else did.
+    launch, or None. After `run`, `stopped` tells whether should_stop ended it with work left, `problem` what else did.
     """
 
     def __init__(
@@ -60,16 +60,16 @@ class Driver:
             if key not in self._committed and (parent is None or parent in self._committed):
                 self._release(key)
 
-    def run(self, executor: Executor, session: int) -> None:
-        """Run until everything is committed, or until something ends the session early."""
+    def run(self, executor: Executor, launch: int) -> None:
+        """Run until everything is committed, or until something ends the launch early."""
         failed = sum(status == FAILED for status in self._committed.values())
         self._progress.start(self._plan.size, len(self._committed), failed)
         try:
-            self._loop(executor, session)
+            self._loop(executor, launch)
         finally:
             self._progress.close()
 
-    def _loop(self, executor: Executor, session: int) -> None:
+    def _loop(self, executor: Executor, launch: int) -> None:
         last_worker = last_housekeeping = time.monotonic()
         while True:
             self._heed_stop(executor)
@@ -78,7 +78,7 @@ class Driver:
                 return
             finished = executor.next_finished(_POLL_SECONDS)
             if finished is not None:
-                self._take(finished, session)
+                self._take(finished, launch)
             self._progress.tick()
             now = time.monotonic()
             if executor.worker_count():
@@ -120,14 +120,14 @@ class Driver:
         self._running[name] = attempt
         executor.submit(Task(name, self._point, attempt.inputs, attempt.seed, arrays))
 
-    def _take(self, finished: Finished, session: int) -> None:
+    def _take(self, finished: Finished, launch: int) -> None:
         attempt, result = self._running.pop(finished.name), finished.result
         if result is None:
             if attempt.number < MAX_ATTEMPTS:
                 self._suspects.append(replace(attempt, number=attempt.number + 1))
                 return
             result = PointResult(FAILED, {}, {}, f"ended its worker {MAX_ATTEMPTS} times (out of memory, or a crash)")
-        execution = Execution(session, attempt.number, finished.wall_seconds, finished.host, time.time())
+        execution = Execution(launch, attempt.number, finished.wall_seconds, finished.host, time.time())
         self._store.put(PointRecord(attempt.key, attempt.inputs, attempt.seed, result, execution))
         self._committed[attempt.key] = result.status
         self._progress.point(result.status == FAILED)

@@ -6,7 +6,7 @@
     /<phase>/quantities/<name>        shape of the axes; numbers (NaN where missing) or texts ("" where missing)
     /<phase>/arrays/<name>            axes + shape of the array, NaN where missing; a group with one dataset a point,
                                       named by its index, where shapes differ or gaps could not be told from numbers
-    /execution/<phase>/...            session, attempt, wall_seconds, host, committed: left aside by comparisons
+    /execution/<phase>/...            launch, attempt, wall_seconds, host, committed: left aside by comparisons
 
     /inputs, /versions                JSON texts: what every point derives from; what the run was started with
 

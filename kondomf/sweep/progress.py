@@ -9,7 +9,7 @@ class Progress:
     """What the driver tells while it runs; this one keeps it to itself."""
 
     def start(self, total: int, done: int, failed: int) -> None:
-        """The size of the run and what earlier sessions left; failed points count as done."""
+        """The size of the run and what earlier launches left; failed points count as done."""
 
     def point(self, failed: bool) -> None:
         """One more point is committed."""
@@ -18,7 +18,7 @@ class Progress:
         """Nothing new; called every second or so."""
 
     def close(self) -> None:
-        """The session has ended."""
+        """The launch has ended."""
 
 
 class Lines(Progress):
@@ -53,7 +53,7 @@ class Lines(Progress):
 
 
 class Bar(Progress):
-    """A progress bar whose remaining time comes from all points of this session, not from the last few."""
+    """A progress bar whose remaining time comes from all points of this launch, not from the last few."""
 
     def __init__(self, stream: TextIO) -> None:
         self._stream = stream

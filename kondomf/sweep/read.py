@@ -23,7 +23,7 @@ from kondomf.sweep.store import SqliteStore
 class RunSummary:
     """Progress of a run. `done` excludes failed points; `statuses` counts by phase class and status.
 
-    seconds_per_point: over all sessions, None before the first point; remaining_seconds at that pace.
+    seconds_per_point: over all launches, None before the first point; remaining_seconds at that pace.
     working: who is computing at the moment, in words, or None.
     """
 

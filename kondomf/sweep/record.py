@@ -53,7 +53,7 @@ class PointResult:
 class Execution:
     """How a point was run; comparisons of runs leave this aside. Times in seconds, `committed` since the epoch."""
 
-    session: int
+    launch: int
     attempt: int
     wall_seconds: float
     host: str
@@ -72,7 +72,7 @@ class PointRecord:
 
 
 @dataclass(frozen=True)
-class Session:
+class Launch:
     """One start of the driver; `started` in seconds since the epoch."""
 
     started: float
@@ -84,7 +84,7 @@ class Session:
 
 
 class Pace(NamedTuple):
-    """Points committed and the seconds this took, over all sessions (each from its start to its last commit)."""
+    """Points committed and the seconds this took, over all launches (each from its start to its last commit)."""
 
     points: int
     seconds: float

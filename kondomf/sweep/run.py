@@ -19,7 +19,7 @@ from kondomf.sweep.folder import RECORD, locked, prepare_folder, versions
 from kondomf.sweep.plan import SweepPlan, load_sweep, plain_inputs
 from kondomf.sweep.product import ProductBuild
 from kondomf.sweep.progress import Progress
-from kondomf.sweep.record import FAILED, Session
+from kondomf.sweep.record import FAILED, Launch
 from kondomf.sweep.stop import GraceOver, StopRequest, stop_signals
 from kondomf.sweep.store import SqliteStore
 
@@ -31,7 +31,7 @@ _FREE_BYTES = 100 * 2**20
 
 @dataclass(frozen=True)
 class RunOutcome:
-    """How a session ended: points of the whole run recorded as done and as failed, points still to do.
+    """How a launch ended: points of the whole run recorded as done and as failed, points still to do.
 
     interrupted: somebody stopped it. problem: what else ended it early or kept the product from being rebuilt, with the
     remedy. In every case starting the same sweep again goes on where it ended.
@@ -58,7 +58,7 @@ def run_sweep(
     """Start the sweep in `folder`, or resume it there if the inputs are the same.
 
     backend: "serial" (this process) or "local" (`workers` processes on this host). stop: asked before every new point;
-    true ends the session once running points are done, as the first Ctrl-C or SIGTERM does, which gives them
+    true ends the launch once running points are done, as the first Ctrl-C or SIGTERM does, which gives them
     `grace_seconds`; a second signal ends it at once. point: the function called for every point, "module:function".
     Raises InputError: wrong sweep, material, point function or workers; folder not a run, of other inputs or in use.
     """
@@ -113,8 +113,8 @@ def _compute(
         return
     executor = make_executor(backend, workers)
     try:
-        session = Session(time.time(), socket.gethostname(), getpid(), backend, workers, versions())
-        driver.run(executor, store.begin_session(session))
+        launch = Launch(time.time(), socket.gethostname(), getpid(), backend, workers, versions())
+        driver.run(executor, store.begin_launch(launch))
         request.disarm()
     except GraceOver:
         driver.stopped = True

@@ -20,17 +20,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.errors import InputError
-from kondomf.sweep.record import Arrays, Execution, Pace, PointKey, PointRecord, PointResult, Session
+from kondomf.sweep.record import Arrays, Execution, Launch, Pace, PointKey, PointRecord, PointResult
 
 SCHEMA_VERSION = 1
 _APPLICATION = 0x4B4D4653  # marks an SQLite file as a record of this package
 
 _TABLES = """
 CREATE TABLE run (fingerprint TEXT NOT NULL);
-CREATE TABLE sessions (id INTEGER PRIMARY KEY, started REAL NOT NULL, description TEXT NOT NULL);
+CREATE TABLE launches (id INTEGER PRIMARY KEY, started REAL NOT NULL, description TEXT NOT NULL);
 CREATE TABLE points (
     phase TEXT NOT NULL, idx TEXT NOT NULL, inputs TEXT NOT NULL, seed INTEGER NOT NULL, status TEXT NOT NULL,
-    message TEXT NOT NULL, scalars TEXT NOT NULL, session INTEGER NOT NULL, attempt INTEGER NOT NULL,
+    message TEXT NOT NULL, scalars TEXT NOT NULL, launch INTEGER NOT NULL, attempt INTEGER NOT NULL,
     wall_seconds REAL NOT NULL, host TEXT NOT NULL, committed REAL NOT NULL, PRIMARY KEY (phase, idx)
 );
 CREATE TABLE arrays (
@@ -42,7 +42,7 @@ CREATE TABLE arrays (
 class Store(Protocol):
     """What the driver, the product and the readers need of a record."""
 
-    def begin_session(self, session: Session) -> int:
+    def begin_launch(self, launch: Launch) -> int:
         """Note a start of the driver; returns its number for the executions that follow."""
 
     def put(self, record: PointRecord) -> None:
@@ -64,7 +64,7 @@ class Store(Protocol):
         """Committed points of a phase class sorted by index, their arrays left out."""
 
     def pace(self) -> Pace:
-        """Points and seconds over all sessions."""
+        """Points and seconds over all launches."""
 
     def close(self) -> None:
         """Give back what the store holds open."""
@@ -75,11 +75,11 @@ class MemoryStore:
 
     def __init__(self) -> None:
         self._records: dict[PointKey, PointRecord] = {}
-        self._sessions: list[Session] = []
+        self._launches: list[Launch] = []
 
-    def begin_session(self, session: Session) -> int:
-        self._sessions.append(session)
-        return len(self._sessions)
+    def begin_launch(self, launch: Launch) -> int:
+        self._launches.append(launch)
+        return len(self._launches)
 
     def put(self, record: PointRecord) -> None:
         if record.key in self._records:
@@ -105,9 +105,9 @@ class MemoryStore:
     def pace(self) -> Pace:
         last: dict[int, float] = defaultdict(float)
         for record in self._records.values():
-            session = record.execution.session
-            last[session] = max(last[session], record.execution.committed)
-        return Pace(len(self._records), sum(end - self._sessions[number - 1].started for number, end in last.items()))
+            launch = record.execution.launch
+            last[launch] = max(last[launch], record.execution.committed)
+        return Pace(len(self._records), sum(end - self._launches[number - 1].started for number, end in last.items()))
 
     def close(self) -> None:
         """Nothing is held open."""
@@ -145,11 +145,11 @@ class SqliteStore:
     def __exit__(self, *_: object) -> None:
         self.close()
 
-    def begin_session(self, session: Session) -> int:
+    def begin_launch(self, launch: Launch) -> int:
         with self._connection:
-            row = (session.started, json.dumps(asdict(session)))
+            row = (launch.started, json.dumps(asdict(launch)))
             number = self._connection.execute(
-                "INSERT INTO sessions (started, description) VALUES (?, ?)", row
+                "INSERT INTO launches (started, description) VALUES (?, ?)", row
             ).lastrowid
         assert number is not None
         return number
@@ -189,7 +189,7 @@ class SqliteStore:
 
     def records(self, phase: str) -> list[PointRecord]:
         rows = self._rows(
-            "SELECT idx, inputs, seed, status, scalars, message, session, attempt, wall_seconds, host, committed"
+            "SELECT idx, inputs, seed, status, scalars, message, launch, attempt, wall_seconds, host, committed"
             " FROM points WHERE phase = ?",
             (phase,),
         )
@@ -208,7 +208,7 @@ class SqliteStore:
     def pace(self) -> Pace:
         rows = self._rows(
             "SELECT COUNT(*), MAX(committed) - started FROM points"
-            " JOIN sessions ON sessions.id = points.session GROUP BY sessions.id"
+            " JOIN launches ON launches.id = points.launch GROUP BY launches.id"
         )
         return Pace(sum(points for points, _ in rows), sum(seconds for _, seconds in rows))
 
