@@ -11,6 +11,8 @@ from kondomf.phases.spectrum import Gap
 
 NO_HYBRIDIZATION = 1e-4
 """Singular values of the hybridization below this count as none."""
+NO_BOND = 1e-3
+"""Bond correlators of the spinons below this count as none: the spins are thermally disordered."""
 NO_MOMENT = 1e-3
 """Moments below this, in units of hbar, count as none."""
 NO_PAIRING = 1e-6
@@ -23,6 +25,7 @@ of it."""
 NO_NEMATICITY = 1e-3
 
 FRACTIONALIZED = "Kitaev spin liquid with metal (FL*)"
+MELTED = "disordered local moments with metal"
 HEAVY = "heavy Fermi liquid"
 INSULATOR = "Kondo insulator"
 UNDETERMINED = "undetermined"
@@ -70,8 +73,8 @@ def _decoupled(order: Order, gap: Gap) -> Label:
     )
     if moment > NO_MOMENT:
         return Label(f"{_magnet(order)} with metal", evidence)
-    bonds = max(abs(e) for energies in order.bond_energies.values() for e in energies)
-    return Label(FRACTIONALIZED if bonds > 0 else "free spins with metal", evidence)
+    bonds = f"largest bond correlator of the spinons {order.spinon_bond:.3g}"
+    return Label(FRACTIONALIZED if order.spinon_bond > NO_BOND else MELTED, (evidence[0], bonds, *evidence[1:]))
 
 
 def _hybridized(solution: Solution, order: Order, gap: Gap) -> Label:

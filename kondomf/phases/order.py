@@ -93,6 +93,12 @@ class Order:
         return float(total)
 
     @cached_property
+    def spinon_bond(self) -> float:
+        """Largest |<i chi^mu chi^nu>| on a first-neighbour bond."""
+        blocks = [self.block((i, SPINON), (j, SPINON), r) for i, j, r, _ in self.bonds]
+        return float(np.abs(blocks).max())
+
+    @cached_property
     def pairing(self) -> tuple[float, float]:
         """Largest |psi| and |d| of <c c> = (psi + d.sigma) i sigma_y over sites and first-neighbour bonds."""
         pairs = [(i, i, HERE) for i in self.sites] + [(i, j, r) for i, j, r, _ in self.bonds]
