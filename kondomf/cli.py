@@ -1,16 +1,18 @@
 """The commands: each parses its arguments, calls one function, prints. Heavy imports wait until a command runs."""
 
-import json
+import functools
 import math
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from kondomf.errors import InputError
-from kondomf.files import refuse_existing, write_atomically
+
+if TYPE_CHECKING:
+    from kondomf.report.outputs import Outputs
 
 OBSERVABLES = ("magnetization", "grand_potential")
 EXIT_NUMERICS, EXIT_INPUT, EXIT_INTERRUPTED = 1, 2, 130
@@ -19,7 +21,10 @@ FilePath = click.Path(path_type=Path)
 
 
 def outputs(*names: str) -> Callable[[Any], Any]:
-    """Add the output options that a command offers, out of json, figure, data and state, and --overwrite."""
+    """Add the output options that a command offers, out of json, figure, data and state, and --overwrite.
+
+    The command gets them as one argument `out`, checked.
+    """
     texts = {
         "json": "write the result as JSON to FILE, or to standard output with -",
         "figure": "write a figure to FILE (.png, .pdf or .svg)",
@@ -28,11 +33,18 @@ def outputs(*names: str) -> Callable[[Any], Any]:
     }
 
     def decorate(command: Any) -> Any:
-        command = click.option("--overwrite", is_flag=True, help="replace output files that exist")(command)
+        @functools.wraps(command)
+        def checked(*args: Any, overwrite: bool, **options: Any) -> Any:
+            from kondomf.report.outputs import Outputs
+
+            files = {name: options.pop(f"{name}_file") for name in names}
+            return command(*args, out=Outputs(**files, overwrite=overwrite), **options)
+
+        checked = click.option("--overwrite", is_flag=True, help="replace output files that exist")(checked)
         for name in reversed(names):
             option = click.option(f"--{name}", f"{name}_file", type=FilePath, metavar="FILE", help=texts[name])
-            command = option(command)
-        return command
+            checked = option(checked)
+        return checked
 
     return decorate
 
@@ -81,15 +93,14 @@ def new(folder: Path, overwrite: bool) -> None:
 @main.command(epilog=example("kondomf check material.toml"))
 @click.argument("material", type=FilePath)
 @outputs("json")
-def check(material: Path, json_file: Path | None, overwrite: bool) -> None:
+def check(material: Path, out: "Outputs") -> None:
     """Validate a MATERIAL file and show what follows from it, with warnings where the method leaves its range."""
     from kondomf.material import derive, load_material, table
     from kondomf.report.tables import align
 
-    _refuse(overwrite, json_file)
     derived = derive(load_material(material))
     lines = [align(table(derived)), *(f"warning: {text}" for text in derived.warnings)]
-    _report(derived.to_dict(), "\n".join(lines), json_file, overwrite)
+    out.report(derived.to_dict(), "\n".join(lines), click.echo)
 
 
 @main.command(epilog=example("kondomf solve material.toml --state state.h5 --json result.json"))
@@ -105,9 +116,7 @@ def solve(
     start: str | None,
     keep_saddle: bool,
     quiet: bool,
-    json_file: Path | None,
-    state_file: Path | None,
-    overwrite: bool,
+    out: "Outputs",
 ) -> None:
     """Find the lowest state of a MATERIAL and certify it. Exit code 1 if it is no minimum."""
     from kondomf.material import load_material
@@ -118,7 +127,6 @@ def solve(
 
     if keep_saddle and start is None:
         raise InputError("--keep-saddle studies one start: name it with --start")
-    _refuse(overwrite, json_file, state_file)
     layers = load_material(material)
     solution = solve_material(
         layers,
@@ -126,10 +134,10 @@ def solve(
         settings=Settings(keep_saddle=keep_saddle),
         progress=None if quiet else lambda text: click.echo(text, err=True),
     )
-    if state_file is not None:
-        save_state(solution, state_file, overwrite=overwrite)
+    if out.state is not None:
+        save_state(solution, out.state, overwrite=out.overwrite)
     summary = summarize(solution)
-    _report(summary, f"{solution_table(summary)}\n{LIMITS}", json_file, overwrite)
+    out.report(summary, f"{solution_table(summary)}\n{LIMITS}", click.echo)
     ctx.exit(0 if solution.converged else EXIT_NUMERICS)
 
 
@@ -146,26 +154,19 @@ def bands(
     window_meV: float | None,
     points: int,
     grid: int,
-    json_file: Path | None,
-    figure_file: Path | None,
-    data_file: Path | None,
-    overwrite: bool,
+    out: "Outputs",
 ) -> None:
     """Quasiparticle bands of a solved STATE along Γ-K-M-Γ, coloured by conduction weight, and density of states."""
     from kondomf.meanfield import load_state
     from kondomf.phases.band_structure import band_structure
     from kondomf.report.bands import draw_band_structure
-    from kondomf.report.style import save_figure
     from kondomf.report.tables import align
 
-    _refuse(overwrite, json_file, data_file, figure=figure_file)
     _check_window(window_meV)
     found = band_structure(load_state(state), points, grid, window_meV)
-    if figure_file:
-        save_figure(figure_file, lambda figure: draw_band_structure(figure, found), (7.0, 4.0), overwrite)
-    if data_file:
-        write_csv(data_file, found.columns(), overwrite)
-    _report(found.to_dict(), align(found.rows()), json_file, overwrite)
+    out.draw(lambda figure: draw_band_structure(figure, found), (7.0, 4.0))
+    out.write_columns(found.columns())
+    out.report(found.to_dict(), align(found.rows()), click.echo)
 
 
 @main.command(epilog=example("kondomf sweep sweep.toml --run results/map --workers 2"))
@@ -215,24 +216,17 @@ def map_(
     run: Path,
     phase_class: str | None,
     cut: tuple[str, ...],
-    json_file: Path | None,
-    figure_file: Path | None,
-    data_file: Path | None,
-    overwrite: bool,
+    out: "Outputs",
 ) -> None:
     """Phase map of a RUN over its two axes with the regions named, or line cuts of F, hybridization and moments."""
     from kondomf.report.map import draw, figure_size, read_map
-    from kondomf.report.style import save_figure
     from kondomf.report.tables import LIMITS
     from kondomf.sweep import open_run
 
-    _refuse(overwrite, json_file, data_file, figure=figure_file)
     found = read_map(open_run(run), phase_class, cut)
-    if figure_file:
-        save_figure(figure_file, lambda figure: draw(figure, found), figure_size(found), overwrite)
-    if data_file:
-        write_csv(data_file, found.columns(), overwrite)
-    _report(found.to_dict(), f"{found.text()}\n{LIMITS}", json_file, overwrite)
+    out.draw(lambda figure: draw(figure, found), figure_size(found))
+    out.write_columns(found.columns())
+    out.report(found.to_dict(), f"{found.text()}\n{LIMITS}", click.echo)
 
 
 @main.command(epilog=example("kondomf effective material.toml --json model.json"))
@@ -242,7 +236,7 @@ def map_(
 )
 @outputs("json")
 @click.pass_context
-def effective(ctx: click.Context, source: Path, window_meV: float, json_file: Path | None, overwrite: bool) -> None:
+def effective(ctx: click.Context, source: Path, window_meV: float, out: "Outputs") -> None:
     """Four-band model of the heavy Fermi liquid of SOURCE: a solved state (.h5) or a material file.
 
     A material is solved by the isotropic reduced equations, which cost nothing at meV scales. They hold for the so4
@@ -251,10 +245,9 @@ def effective(ctx: click.Context, source: Path, window_meV: float, json_file: Pa
     from kondomf.effective import effective_model
     from kondomf.report.tables import LIMITS, align
 
-    _refuse(overwrite, json_file)
     _check_window(window_meV)
     found = effective_model(source, window_meV)
-    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+    out.report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", click.echo)
     ctx.exit(0 if found.converged else EXIT_NUMERICS)
 
 
@@ -284,10 +277,7 @@ def oscillations(
     harmonic: int,
     observable: str,
     dingle: float,
-    json_file: Path | None,
-    figure_file: Path | None,
-    data_file: Path | None,
-    overwrite: bool,
+    out: "Outputs",
 ) -> None:
     """Quantum oscillations of an effective MODEL (JSON written by effective): amplitude against temperature.
 
@@ -297,10 +287,8 @@ def oscillations(
     from kondomf.effective import read_model
     from kondomf.oscillations import predict
     from kondomf.report.oscillations import draw_prediction
-    from kondomf.report.style import save_figure
     from kondomf.report.tables import LIMITS, align
 
-    _refuse(overwrite, json_file, data_file, figure=figure_file)
     found = predict(
         read_model(model),
         number_list("--fields", fields),
@@ -309,11 +297,9 @@ def oscillations(
         observable=observable,
         dingle_K=dingle,
     )
-    if figure_file:
-        save_figure(figure_file, lambda figure: draw_prediction(figure, found), (7.0, 5.5), overwrite)
-    if data_file:
-        write_csv(data_file, found.table.columns(), overwrite)
-    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+    out.draw(lambda figure: draw_prediction(figure, found), (7.0, 5.5))
+    out.write_columns(found.table.columns())
+    out.report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", click.echo)
 
 
 @main.command(epilog=example("kondomf fit amplitudes.csv --model model.json --figure fit.png"))
@@ -331,10 +317,7 @@ def fit(
     harmonic: int,
     observable: str,
     common_scale: bool,
-    json_file: Path | None,
-    figure_file: Path | None,
-    data_file: Path | None,
-    overwrite: bool,
+    out: "Outputs",
 ) -> None:
     """Do measured AMPLITUDES (CSV) favour Lifshitz-Kosevich or the hybridized model, and with which hybridization?
 
@@ -344,17 +327,13 @@ def fit(
     from kondomf.effective import read_model
     from kondomf.measured import fit_amplitudes, read_amplitudes
     from kondomf.report.fit import draw_fit
-    from kondomf.report.style import save_figure
     from kondomf.report.tables import LIMITS, align
 
-    _refuse(overwrite, json_file, figure_file, data_file)
     model, data = read_model(model_file), read_amplitudes(amplitudes)
     found = fit_amplitudes(data, model, observable=observable, harmonic=harmonic, common_scale=common_scale)
-    if figure_file:
-        save_figure(figure_file, lambda figure: draw_fit(figure, found), (7.0, 5.0), overwrite)
-    if data_file:
-        write_csv(data_file, found.columns(), overwrite)
-    _report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", json_file, overwrite)
+    out.draw(lambda figure: draw_fit(figure, found), (7.0, 5.0))
+    out.write_columns(found.columns())
+    out.report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", click.echo)
     ctx.exit(0 if all(one.converged for one in found.fits) else EXIT_NUMERICS)
 
 
@@ -376,62 +355,9 @@ def number_list(option: str, text: str) -> list[float]:
     return numbers
 
 
-def write_csv(path: Path, columns: dict[str, Any], overwrite: bool) -> None:
-    """Write columns of equal length with a header line of their names."""
-    import csv
-
-    def write(temporary: Path) -> None:
-        with temporary.open("w", newline="", encoding="utf-8") as stream:
-            writer = csv.writer(stream)
-            writer.writerow(columns)
-            writer.writerows(zip(*(list(column) for column in columns.values()), strict=True))
-
-    write_atomically(path, write, overwrite=overwrite)
-
-
-def _refuse(overwrite: bool, *paths: Path | None, figure: Path | None = None) -> None:
-    """Refuse outputs that exist, coincide or cannot be written before anything is computed."""
-    from kondomf.report.style import check_format
-
-    if figure is not None:
-        check_format(figure)
-    given = [path for path in (*paths, figure) if path is not None and str(path) != "-"]
-    for path in given:
-        refuse_existing(path, overwrite)
-        if given.count(path) > 1:
-            raise InputError(f"{path} is named for two outputs; give each its own file")
-
-
 def _check_window(window_meV: float | None) -> None:
     if window_meV is not None and not 0 < window_meV < math.inf:
         raise InputError(f"--window {window_meV:g}: give a finite energy in meV above zero")
-
-
-def _report(result: dict[str, Any], text: str, json_file: Path | None, overwrite: bool) -> None:
-    """Print the table, and write the JSON to a file; "-" puts the JSON alone on standard output."""
-    document = json.dumps(_plain(result), indent=2, ensure_ascii=False, allow_nan=False)
-    if json_file is not None and str(json_file) == "-":
-        click.echo(document)
-        return
-    click.echo(text)
-    if json_file is not None:
-        write_atomically(json_file, lambda path: _write_text(path, document + "\n"), overwrite=overwrite)
-
-
-def _plain(value: Any) -> Any:
-    """What JSON can hold: numbers of numpy as Python's, NaN and infinities as null."""
-    if isinstance(value, dict):
-        return {key: _plain(entry) for key, entry in value.items()}
-    if isinstance(value, list | tuple):
-        return [_plain(entry) for entry in value]
-    if value is None or isinstance(value, str | int):
-        return value
-    number = float(value)
-    return number if math.isfinite(number) else None
-
-
-def _write_text(path: Path, text: str) -> None:
-    path.write_text(text, encoding="utf-8")
 
 
 if __name__ == "__main__":

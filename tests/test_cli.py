@@ -108,7 +108,9 @@ def write(folder, values=(), name="material.toml"):
 
 
 def contents(folder):
-    return {path: path.read_bytes() if path.is_file() else None for path in sorted(folder.rglob("*"))}
+    """Every file with its bytes; readers of a run may leave SQLite's own two files beside its record."""
+    paths = [path for path in sorted(folder.rglob("*")) if not path.name.endswith(("-shm", "-wal"))]
+    return {path: path.read_bytes() if path.is_file() else None for path in paths}
 
 
 def refused(folder, arguments, *fragments):

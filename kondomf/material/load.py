@@ -104,7 +104,9 @@ def _validate(data: Mapping[str, Any], where: str, lines: Mapping[str, int]) -> 
     try:
         return Material.model_validate(_plain(data))
     except ValidationError as error:
-        problems = [_problem(entry, where, lines) for entry in error.errors()]
+        # A misspelt key comes first: it explains the missing one.
+        errors = sorted(error.errors(), key=lambda entry: entry["type"] != "extra_forbidden")
+        problems = [_problem(entry, where, lines) for entry in errors]
     raise InputError("\n".join(problems))
 
 

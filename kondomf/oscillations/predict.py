@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.effective import FourBandModel
+from kondomf.errors import InputError
 from kondomf.oscillations.curves import AmplitudeTable, Trace, amplitude_table, trace
 from kondomf.oscillations.lifshitz_kosevich import dingle_broadening_meV
 from kondomf.oscillations.pole_sum import Broadening, fermi_line_frequencies_T, unhybridized_frequency_T
@@ -54,12 +55,12 @@ class Prediction:
         ]
         for i, field in enumerate(table.fields_T):
             largest = table.amplitude[i].max()
+            text = (
+                f"largest amplitude {largest:.3g} {table.unit} at {self.maximum_K[i]:.3g} K, "
+                f"differs from Lifshitz-Kosevich by up to {self.departure[i]:.2g} of the largest amplitude"
+            )
             rows.append(
-                (
-                    f"at {field:g} T",
-                    f"largest amplitude {largest:.3g} {table.unit} at {self.maximum_K[i]:.3g} K, "
-                    f"differs from Lifshitz-Kosevich by up to {self.departure[i]:.2g} of the largest amplitude",
-                )
+                (f"at {field:g} T", text if largest > 0 else "no oscillation: the amplitude is below any number")
             )
         if self.model.temperature_meV is not None:
             kelvin = self.model.temperature_meV / BOLTZMANN
@@ -98,8 +99,12 @@ def predict(
     """Amplitudes at fields (tesla) and temperatures (kelvin), and a trace between the outer fields at the lowest one.
 
     dingle_K: Dingle temperature of the electrons; the spinons stay sharp. One field gives a trace of three periods.
-    Raises InputError: a field or temperature not above zero, an unknown observable.
+    Raises InputError: a field or temperature not above zero, an unknown observable, E_D = 0.
     """
+    if model.dirac_energy_meV == 0:
+        raise InputError(
+            "E_D = 0: the Dirac point lies at the Fermi level and there is no orbit; dope the conduction layer"
+        )
     broadening = Broadening(electron_meV=float(dingle_broadening_meV(dingle_K)))
     table = amplitude_table(model, fields_T, temperatures_K, harmonic, observable, broadening=broadening)
     frequency = unhybridized_frequency_T(model)

@@ -78,7 +78,10 @@ class Gap:
 
 
 def gap(solution: Solution, points: int = 36) -> Gap:
-    """Gap on a grid that holds Γ, M and K, then by a simplex search from its lowest places."""
+    """Gap on a grid that holds Γ, M and K, then by a simplex search from its lowest places.
+
+    The spinons' counts every spinon excitation: in the Kitaev limit the itinerant ones and those of the bonds.
+    """
     model = solution.model
     if np.abs(solution.p[model.hybridization]).max(initial=0.0) > 1e-6:
         total = _smallest(solution, np.arange(model.n_majorana), points)

@@ -67,6 +67,7 @@ class PhaseMap:
             "axes": {self.keys[0]: self.x.tolist(), self.keys[1]: self.y.tolist()},
             "phase": self.phase.tolist(),
             "status": self.status.tolist(),
+            "cuts": {self.keys[1]: [float(self.y[cut]) for cut in self.cuts]},
             **{name: [[_plain(v) for v in row] for row in values] for name, values in self.quantities.items()},
         }
 
@@ -80,10 +81,18 @@ class PhaseMap:
                 for key, values, index in zip(self.keys, (self.x, self.y), (i, j), strict=True)
             )
             rows.append((name, f"{_points(len(i))}, {ranges}"))
+        rows += [self._cut_row(cut) for cut in self.cuts]
         bad = (self.status != "") & ~np.isin(self.status.astype(str), GOOD)
         rows.append(("no minimum", _points(int(bad.sum()))))
         rows.append(("not computed yet", _points(int((self.status == "").sum()))))
         return align(rows)
+
+    def _cut_row(self, cut: int) -> tuple[str, str]:
+        """The phases met along a cut, each with the first axis value where it is found."""
+        names = [str(name) or "not computed" for name in self.phase[:, cut]]
+        first = [i for i, name in enumerate(names) if i == 0 or name != names[i - 1]]
+        text = ", ".join(f"{names[i]} from {self.x[i]:g}" for i in first)
+        return f"cut at {self.y[cut]:g}", f"along {axis_label(self.keys[0])}: {text}"
 
 
 def read_map(run: Run, phase_class: str | None, cuts: tuple[str, ...] = ()) -> PhaseMap:

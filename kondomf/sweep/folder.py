@@ -77,7 +77,9 @@ def read_header(folder: Path) -> Header:
     if not folder.is_dir():
         raise InputError(f"{folder} is not the folder of a run; give the folder that `kondomf sweep` made")
     if not path.is_file():
-        raise InputError(f"{folder} is not the folder of a run: {HEADER} is missing; choose an empty folder or a run")
+        raise InputError(
+            f"{folder} is not the folder of a run: {HEADER} is missing; give the folder that `kondomf sweep` made, or a new name to start one"
+        )
     try:
         data = tomllib.loads(path.read_text(encoding="utf-8"))
         schema, inputs = data["schema"], data["inputs"]
