@@ -78,7 +78,8 @@ def read_header(folder: Path) -> Header:
         raise InputError(f"{folder} is not the folder of a run; give the folder that `kondomf sweep` made")
     if not path.is_file():
         raise InputError(
-            f"{folder} is not the folder of a run: {HEADER} is missing; give the folder that `kondomf sweep` made, or a new name to start one"
+        remedy = "give the folder that `kondomf sweep` made, or for a new run a name that does not exist"
+        raise InputError(f"{folder} is not the folder of a run: {HEADER} is missing; {remedy}")
         )
     try:
         data = tomllib.loads(path.read_text(encoding="utf-8"))
