@@ -77,10 +77,8 @@ def read_header(folder: Path) -> Header:
     if not folder.is_dir():
         raise InputError(f"{folder} is not the folder of a run; give the folder that `kondomf sweep` made")
     if not path.is_file():
-        raise InputError(
         remedy = "give the folder that `kondomf sweep` made, or for a new run a name that does not exist"
         raise InputError(f"{folder} is not the folder of a run: {HEADER} is missing; {remedy}")
-        )
     try:
         data = tomllib.loads(path.read_text(encoding="utf-8"))
         schema, inputs = data["schema"], data["inputs"]
