@@ -4,12 +4,15 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import eigh
 
 from kondomf.meanfield.evaluate import response
 from kondomf.meanfield.problem import Point, Problem, point_at
 
 Array = NDArray[np.float64]
 
+DRIVER = "evr"
+"""LAPACK's divide and conquer, numpy's choice, has failed to converge on well-conditioned matrices met here."""
 NULL = 1e-13
 """Directions whose response is below this fraction of the largest do not change the state: curvature 1."""
 
@@ -56,7 +59,7 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
     basis = None if full_space else problem.basis
     if basis is not None:
         m, c = basis.T @ m @ basis, c @ basis
-    size, q = np.linalg.eigh((m + m.T) / 2)
+    size, q = eigh((m + m.T) / 2, driver=DRIVER)
     largest = max(size.max(initial=0.0), 1e-300)
     keep = size > NULL * largest
     r = q[:, keep] * np.sqrt(size[keep])
@@ -67,7 +70,7 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
     r = r - (r @ u) @ u.T
     if basis is not None:
         r = basis @ r
-    eigenvalues, z = np.linalg.eigh(np.eye(r.shape[1]) + r.T @ v @ r)
+    eigenvalues, z = eigh(np.eye(r.shape[1]) + r.T @ v @ r, driver=DRIVER)
     return Curvature(eigenvalues, r @ z, v)
 
 

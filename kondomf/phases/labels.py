@@ -19,6 +19,8 @@ NO_PAIRING = 1e-6
 """Pairing over normal amplitude below this counts as none in the so4 form."""
 EXPLICIT_PAIRING = 0.12
 """The kitaev form pairs the electrons explicitly, by up to this times |K|/t_eff: no evidence of superconductivity."""
+STRONG_PAIRING = 1e-2
+"""Pairing over normal amplitude that, with a gap above k_BT where bands cannot be filled, makes a superconductor."""
 EXPLICIT_MOMENT = 0.1
 """The same for moments of a hybridized state in the kitaev form, in units of hbar at |K| = t_eff and at least a tenth
 of it."""
@@ -60,11 +62,11 @@ def label(solution: Solution, order: Order, gap: Gap) -> Label:
     if solution.status == "not-converged":
         return Label(UNDETERMINED, (f"not converged: largest residual {solution.residual_meV:.2g} meV",))
     if order.hybridization.max() < NO_HYBRIDIZATION:
-        return _decoupled(order, gap)
+        return _decoupled(order, gap, solution.model.temperature)
     return _hybridized(solution, order, gap)
 
 
-def _decoupled(order: Order, gap: Gap) -> Label:
+def _decoupled(order: Order, gap: Gap, temperature: float) -> Label:
     moment = float(np.linalg.norm(order.spin_moment, axis=1).max())
     evidence = (
         f"no hybridization (largest {order.hybridization.max():.1g})",
@@ -72,7 +74,7 @@ def _decoupled(order: Order, gap: Gap) -> Label:
         f"smallest excitation of the spinons {gap.spinons:.3g} meV, of the electrons {gap.electrons:.3g} meV",
     )
     if moment > NO_MOMENT:
-        return Label(f"{_magnet(order)} with metal", evidence)
+        return Label(f"{_magnet(order)} with {'metal' if gap.electrons < temperature else 'insulator'}", evidence)
     bonds = f"largest bond correlator of the spinons {order.spinon_bond:.3g}"
     return Label(FRACTIONALIZED if order.spinon_bond > NO_BOND else MELTED, (evidence[0], bonds, *evidence[1:]))
 
@@ -82,24 +84,24 @@ def _hybridized(solution: Solution, order: Order, gap: Gap) -> Label:
     allowed = thresholds(material)
     ratio = max(order.pairing) / order.normal_amplitude
     moment = float(np.linalg.norm(order.spin_moment, axis=1).max())
-    gapped = gap.total > max(1e-3 * material.temperature_meV, 2 * (solution.zone_error_meV or 0.0))
+    gapped = gap.total > material.temperature_meV
     # With the two spinons a cell holds 2n + 2 fermions: only at n = 1 can bands be filled without pairing.
     insulator_possible = abs(solution.filling - 1) < 1e-6
-    paired = ratio > allowed.pairing or (gapped and not insulator_possible and ratio > NO_PAIRING)
+    paired = ratio > allowed.pairing or (gapped and not insulator_possible and ratio > STRONG_PAIRING)
     name = INSULATOR if gapped and insulator_possible else HEAVY
     if paired:
         name = ("triplet" if order.pairing[1] > order.pairing[0] else "singlet") + " superconductor"
     evidence = [
         f"largest hybridization {order.hybridization.max():.3g}",
         f"pairing over normal amplitude {ratio:.2g}, of which the spin forms explain up to {allowed.pairing:.2g}",
-        f"smallest excitation {gap.total:.3g} meV at filling {solution.filling:.4g}",
+        f"smallest excitation {gap.total:.3g} meV, {gap.total / material.temperature_meV:.2g} k_BT",
         f"spin moment {moment:.2g}, of which the spin forms explain up to {allowed.moment:.2g}",
     ]
-    if order.nematicity > NO_NEMATICITY and _isotropic(material):
-        name = f"nematic {name}"
-        evidence.append(f"bond energies differ by {order.nematicity:.2g} of their sum")
     if moment > allowed.moment and material.mean_field.magnetic_channel:
         name = f"{_magnet(order)} and {name}"
+    elif order.nematicity > NO_NEMATICITY and _isotropic(material):
+        name = f"nematic {name}"
+        evidence.append(f"bond energies differ by {order.nematicity:.2g} of their sum")
     return Label(name, tuple(evidence))
 
 
@@ -111,7 +113,7 @@ def _magnet(order: Order) -> str:
     staggered = np.linalg.norm((moments * (-1.0) ** np.arange(len(moments))[:, None]).sum(axis=0))
     if total > 0.9 * size:
         return "ferromagnet"
-    return "Néel antiferromagnet" if staggered > 0.9 * size else "magnet"
+    return "Néel antiferromagnet" if staggered > 0.9 * size else "canted magnet"
 
 
 def _isotropic(material: Material) -> bool:

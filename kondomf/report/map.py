@@ -1,6 +1,7 @@
 """Phase map of a run over its two axes, and line cuts along the first of them."""
 
 import math
+import textwrap
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -25,6 +26,8 @@ CUTS = (
     ("spin_moment", "spin moment (ħ)"),
 )
 """Quantities of a line cut and their labels."""
+LABELLED_POINTS = 6
+"""Smaller regions are named in the legend alone."""
 GOOD = ("minimum", "minimum-in-class")
 UNITS = {"meV": "meV", "K": "K", "angstrom": "Å", "degree": "degree", "per_cm2": "1/cm²"}
 """Unit at the end of a key, and how a person writes it."""
@@ -175,6 +178,8 @@ def draw_map(axes: "Axes", found: PhaseMap) -> None:
         x, y = np.nonzero(found.phase == name)
         color, marker = CYCLE[i % len(CYCLE)], MARKERS[i % len(MARKERS)]
         axes.scatter(found.x[x], found.y[y], s=9, color=color, marker=marker, label=f"{name} ({len(x)})")
+    for name in found.names:
+        _write_name(axes, found, name)
     bad = (found.status != "") & ~np.isin(found.status.astype(str), GOOD)
     if bad.any():
         x, y = np.nonzero(bad)
@@ -182,6 +187,26 @@ def draw_map(axes: "Axes", found: PhaseMap) -> None:
     axes.set_xlabel(axis_label(found.keys[0]))
     axes.set_ylabel(axis_label(found.keys[1]))
     axes.figure.legend(loc="outside lower center", ncols=2, frameon=False, fontsize=8)
+
+
+def _write_name(axes: "Axes", found: PhaseMap, name: str) -> None:
+    """The name inside the largest connected region of a phase, where that is large enough to hold it."""
+    from scipy.ndimage import label
+
+    regions, count = label(found.phase == name)
+    size, region = max((int((regions == i).sum()), i) for i in range(1, count + 1))
+    if size < LABELLED_POINTS:
+        return
+    i, j = np.nonzero(regions == region)
+    centre = np.argmin((i - i.mean()) ** 2 + (j - j.mean()) ** 2)
+    axes.annotate(
+        textwrap.fill(name, 14),
+        (found.x[i[centre]], found.y[j[centre]]),
+        ha="center",
+        va="center",
+        fontsize=8,
+        bbox={"boxstyle": "round,pad=0.2", "facecolor": "white", "edgecolor": "none", "alpha": 0.8},
+    )
 
 
 def draw_cuts(panels: "list[Axes]", found: PhaseMap) -> None:

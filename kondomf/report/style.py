@@ -12,8 +12,8 @@ if TYPE_CHECKING:
 
 FORMATS = (".png", ".pdf", ".svg")
 
-CYCLE = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
-"""Colours of Nature Methods 8, 441 (2011), "Color blindness", in an order of our own."""
+CYCLE = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000", "#F0E442", "#8C6D31", "#7F7F7F")
+"""Colours of Nature Methods 8, 441 (2011), "Color blindness", in an order of our own, and two more."""
 
 _RC: dict[str, Any] = {
     "font.size": 10,
