@@ -75,7 +75,6 @@ def descend(
     `progress` is called after every step with (step name, matrices so far, F, largest residual), as in the history.
     """
     settings = settings or Settings()
-    scale = problem.model.scale
     history: list[tuple[str, int, float, float]] = []
 
     def record(name: str, at: Point) -> None:
@@ -89,26 +88,39 @@ def descend(
         return Descent(point, "not-converged", "the start has no finite free energy", None, None, tuple(history))
     newton: Step = StationaryNewton() if settings.keep_saddle else TrustRegion()
     phases: tuple[tuple[Step, int], ...] = ((Mixing(), settings.mixing_steps), (newton, settings.newton_steps))
-    left_saddle = None
-    for step, limit in phases:
-        memory = step.init()
-        for _ in range(limit):
-            if point is not left_saddle and is_stationary(point, scale, settings):
-                verdict, point = certify(problem, point, settings)
-                if verdict.status == "minimum" or settings.keep_saddle:
-                    return replace(verdict, history=tuple(history))
-                left_saddle, memory = point, step.init()
-                if step is not newton:
-                    break
-            change, memory = step.propose(problem, point, memory)
-            trial = _trial(problem, point, step, change, memory)
-            accepted = trial.is_finite and step.improves(point, trial, ROUNDING * scale)
-            memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
-            if accepted:
-                point = trial
-            record(step.name, point)
+    try:
+        for step, limit in phases:
+            point, verdict = _go_down(problem, point, step, limit, settings, record)
+            if verdict is not None:
+                return replace(verdict, history=tuple(history))
+    except np.linalg.LinAlgError as error:
+        return Descent(point, "not-converged", f"linear algebra failed: {error}", None, None, tuple(history))
     message = f"not stationary after {len(history) - 1} steps; try another start, seed or temperature"
     return Descent(point, "not-converged", message, None, None, tuple(history))
+
+
+def _go_down(
+    problem: Problem, point: Point, step: Step, limit: int, settings: Settings, record: Callable[[str, Point], None]
+) -> tuple[Point, Descent | None]:
+    """At most `limit` steps of one kind; the verdict if they end at a minimum (or a saddle that is to be kept)."""
+    scale = problem.model.scale
+    memory, left_saddle = step.init(), None
+    for _ in range(limit):
+        if point is not left_saddle and is_stationary(point, scale, settings):
+            verdict, point = certify(problem, point, settings)
+            if verdict.status == "minimum" or settings.keep_saddle:
+                return point, verdict
+            if not step.leaves_saddles:
+                break
+            left_saddle, memory = point, step.init()
+        change, memory = step.propose(problem, point, memory)
+        trial = _trial(problem, point, step, change, memory)
+        accepted = trial.is_finite and step.improves(point, trial, ROUNDING * scale)
+        memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
+        if accepted:
+            point = trial
+        record(step.name, point)
+    return point, None
 
 
 def certify(problem: Problem, point: Point, settings: Settings) -> tuple[Descent, Point]:

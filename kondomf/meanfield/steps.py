@@ -21,6 +21,8 @@ class Step(Protocol):
 
     @property
     def name(self) -> str: ...
+    @property
+    def leaves_saddles(self) -> bool: ...
     def init(self) -> Any: ...
     def propose(self, problem: Problem, point: Point, memory: Any) -> tuple[Array, Any]: ...
     def correct(self, problem: Problem, point: Point, trial: Point, memory: Any) -> Array | None: ...
@@ -46,6 +48,7 @@ class Mixing:
     damping: float = 0.7
     depth: int = 4
     name: str = "mixing"
+    leaves_saddles: bool = False
 
     def init(self) -> MixingMemory:
         return MixingMemory(self.damping)
@@ -99,6 +102,7 @@ class TrustRegion:
     floor: float = 1e-10
     stiff: float = 0.03
     name: str = "newton"
+    leaves_saddles: bool = True
 
     def init(self) -> TrustMemory:
         return TrustMemory()
@@ -152,6 +156,7 @@ class StationaryNewton:
 
     floor: float = 1e-10
     name: str = "stationary newton"
+    leaves_saddles: bool = False
 
     def init(self) -> TrustMemory:
         return TrustMemory()

@@ -200,11 +200,11 @@ def _write_name(axes: "Axes", found: PhaseMap, name: str) -> None:
     i, j = np.nonzero(regions == region)
     centre = np.argmin((i - i.mean()) ** 2 + (j - j.mean()) ** 2)
     axes.annotate(
-        textwrap.fill(name, 14),
+        textwrap.fill(name, 15, break_long_words=False),
         (found.x[i[centre]], found.y[j[centre]]),
         ha="center",
         va="center",
-        fontsize=8,
+        fontsize=7,
         bbox={"boxstyle": "round,pad=0.2", "facecolor": "white", "edgecolor": "none", "alpha": 0.8},
     )
 
