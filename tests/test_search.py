@@ -9,7 +9,18 @@ import pytest
 from materials import dimensionless
 
 from kondomf.errors import InputError
-from kondomf.meanfield import Settings, Start, load_state, named_start, save_state, solve
+from kondomf.meanfield import (
+    Minimum,
+    Settings,
+    Start,
+    Trial,
+    chance_of_another,
+    distinct_minima,
+    load_state,
+    named_start,
+    save_state,
+    solve,
+)
 from kondomf.meanfield.starts import starts
 from kondomf.model import build_model
 
@@ -165,3 +176,38 @@ def test_a_state_needs_an_existing_folder(searched, tmp_path):
     with pytest.raises(InputError, match="create it first"):
         save_state(searched, tmp_path / "missing" / "state.h5")
     assert list(tmp_path.iterdir()) == []
+
+
+# ---- what a search says of itself --------------------------------------------------------------------------------
+
+
+def test_ends_of_equal_free_energy_and_hybridization_are_one_minimum_and_saddles_are_none():
+    trials = [
+        Trial("a", "minimum", -3000.0, 0.3),
+        Trial("b", "minimum", -3000.00001, 0.3),
+        Trial("c", "minimum", -3000.0, 0.2),
+        Trial("d", "minimum", -2999.0, 0.3),
+        Trial("e", "saddle", -3001.0, 0.1),
+        Trial("f", "not-converged", -3002.0, 0.1),
+    ]
+    minima = distinct_minima(trials)
+    assert [(minimum.found, minimum.hybridization) for minimum in minima] == [(2, 0.3), (1, 0.2), (1, 0.3)]
+    assert minima[0].free_energy_meV_per_cell == -3000.00001
+
+
+def test_the_chance_of_another_minimum_is_the_share_of_starts_whose_minimum_was_met_once():
+    """Good-Turing: Biometrika 40, 237 (1953), "The population frequencies of species and the estimation of population
+    parameters" (from memory)."""
+    assert chance_of_another([Minimum(-2.0, 0.0, 3), Minimum(-1.0, 0.1, 1), Minimum(0.0, 0.2, 1)]) == 2 / 5
+    assert chance_of_another([Minimum(-2.0, 0.0, 4)]) == 0
+    assert chance_of_another([]) is None
+
+
+def test_the_minima_of_a_search_account_for_all_starts_that_ended_in_one():
+    """K = -t, J_K = 3.2 t, n = 1: the decoupled and the hybridized minimum, and magnets, are all met."""
+    solution = solve(dimensionless(-1.0, 3.2, search__starts=6, points=8))
+    minima = solution.minima
+    assert sum(minimum.found for minimum in minima) == sum(trial.status == "minimum" for trial in solution.trials)
+    assert len(minima) >= 2
+    assert minima[0].free_energy_meV_per_cell == pytest.approx(solution.free_energy_meV_per_cell, abs=1e-6)
+    assert [m.free_energy_meV_per_cell for m in minima] == sorted(m.free_energy_meV_per_cell for m in minima)

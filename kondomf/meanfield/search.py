@@ -102,29 +102,20 @@ def _converged(end: _End, settings: Settings) -> bool:
 
 
 def _distinct(model: MeanFieldModel, ends: list[_End]) -> list[_End]:
-    """Lowest ends that differ in F or in hybridization, at most MOST_REFINED."""
+    """Lowest ends that are not the same state, at most MOST_REFINED."""
     result: list[_End] = []
     for end in sorted(ends, key=lambda e: e.free_energy):
         if result and end.free_energy > result[0].free_energy + WINDOW * model.scale:
             break
-        size = _hybridization(model, end)
-        same = (
-            abs(end.free_energy - e.free_energy) < 1e-7 * model.scale and abs(size - _hybridization(model, e)) < 1e-3
-            for e in result
-        )
-        if not any(same):
+        if not any(_trial(model, end).same_state(_trial(model, other)) for other in result):
             result.append(end)
     return result[:MOST_REFINED]
 
 
-def _hybridization(model: MeanFieldModel, end: _End) -> float:
-    return float(np.abs(end.descent.point.p[model.hybridization]).max(initial=0.0))
-
-
 def _trial(model: MeanFieldModel, end: _End) -> Trial:
-    return Trial(
-        end.start.name, end.descent.status, end.free_energy / model.cell.size, round(_hybridization(model, end), 9)
-    )
+    w = end.descent.point.p[model.hybridization]
+    size = float(np.sqrt(w @ w / (16 * model.cell.n_sites)))
+    return Trial(end.start.name, end.descent.status, end.free_energy / model.cell.size, size)
 
 
 def _with_evidence(problem: Problem, end: _End, material: Material, settings: Settings) -> Solution:

@@ -1,11 +1,12 @@
 """Everything that is known of a solution, as plain numbers and words."""
 
+from dataclasses import asdict
 from typing import Any
 
 import numpy as np
 
 import kondomf
-from kondomf.meanfield import Solution
+from kondomf.meanfield import Solution, chance_of_another
 from kondomf.phases.labels import label
 from kondomf.phases.order import Order
 from kondomf.phases.spectrum import gap
@@ -55,7 +56,9 @@ def summarize(solution: Solution) -> dict[str, Any]:
         "zone_error_meV": solution.zone_error_meV,
         "phase_class": solution.phase_class,
         "start": solution.start,
-        "trials": [vars(trial) for trial in solution.trials],
+        "trials": [asdict(trial) for trial in solution.trials],
+        "minima": [asdict(minimum) for minimum in solution.minima],
+        "chance_of_another_minimum": chance_of_another(solution.minima),
         "evaluations": solution.evaluations,
         "wall_seconds": solution.wall_seconds,
         "inputs": solution.inputs,

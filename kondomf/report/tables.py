@@ -43,16 +43,25 @@ def solution_table(summary: dict[str, Any]) -> str:
     if zero is not None:
         text = f"{zero['count']}: {zero['broken_generators']} broken generators, {zero['gauge_directions']} gauge"
         rows.append(("zero modes", text + (f", {zero['unexplained']} unexplained" if zero["unexplained"] else "")))
-    rows += [("starts", _trials(summary)), ("evaluations", f"{summary['evaluations']} matrices")]
+    rows += [
+        ("starts", _search(summary)),
+        ("shown", f'from start "{summary["start"]}"'),
+        ("evaluations", f"{summary['evaluations']} matrices"),
+    ]
     return align(rows)
 
 
-def _trials(summary: dict[str, Any]) -> str:
-    """How many starts ended lowest, on the grid they were searched on."""
-    energies = [trial["free_energy_meV_per_cell"] for trial in summary["trials"]]
-    lowest = min(energies)
-    count = sum(energy < lowest + 1e-6 * abs(lowest) for energy in energies)
-    return f'{count} of {len(energies)} ended at the lowest free energy; shown: from "{summary["start"]}"'
+def _search(summary: dict[str, Any]) -> str:
+    """How many starts ended lowest, how many minima were met, and the chance that there are more."""
+    minima, starts = summary["minima"], len(summary["trials"])
+    if not minima:
+        return f"none of {starts} ended at a minimum"
+    others = ", ".join(
+        f"{m['free_energy_meV_per_cell'] - minima[0]['free_energy_meV_per_cell']:+.4g}" for m in minima[1:]
+    )
+    text = f"{minima[0]['found']} of {starts} ended at the lowest of {len(minima)} minima"
+    text += f" (others at {others} meV)" if others else ""
+    return f"{text}; chance that one more meets a new one about {summary['chance_of_another_minimum']:.0%}"
 
 
 def _numbers(values: Sequence[float]) -> str:

@@ -52,7 +52,9 @@ def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[A
         "pairing": max(summary["pairing"]["singlet"], summary["pairing"]["triplet"]),
         "zero_modes": (summary["zero_modes"] or {}).get("count"),
         "unexplained_zero_modes": (summary["zero_modes"] or {}).get("unexplained"),
-        "starts_at_lowest": _starts_at_lowest(summary["trials"]),
+        "starts_at_lowest": summary["minima"][0]["found"] if summary["minima"] else 0,
+        "minima": len(summary["minima"]),
+        "chance_of_another_minimum": summary["chance_of_another_minimum"],
         "phase_evidence": "; ".join(summary["phase_evidence"]),
     }
     arrays = {
@@ -64,8 +66,3 @@ def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[A
         "electron_moments": electrons,
     }
     return PointResult(solution.status, scalars, arrays)
-
-
-def _starts_at_lowest(trials: list[dict[str, Any]]) -> int:
-    lowest = min(trial["free_energy_meV_per_cell"] for trial in trials)
-    return sum(trial["free_energy_meV_per_cell"] < lowest + 1e-6 * abs(lowest) for trial in trials)
