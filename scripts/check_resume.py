@@ -29,7 +29,8 @@ def main() -> None:
     rng = random.Random(1)
     with tempfile.TemporaryDirectory() as folder:
         run = Path(folder) / "map.run"
-        command = [sys.executable, "-m", "kondomf.cli", "sweep", str(SWEEP), "--run", str(run), "--workers", "2"]
+        kondomf = Path(sys.executable).with_name("kondomf")
+        command = [str(kondomf), "sweep", str(SWEEP), "--run", str(run), "--workers", "2"]
         for number in range(interruptions + 1):
             process = subprocess.Popen(command, start_new_session=True)
             try:
