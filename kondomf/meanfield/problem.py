@@ -64,7 +64,7 @@ class Point:
 def point_at(problem: Problem, guess: Array, tolerance: float = CONSTRAINT_TOLERANCE) -> Point:
     """Solve the multipliers starting from the fields `guess` (N,) and evaluate free energy and residual.
 
-    F = omega - phi.P + h.P + P.V.P/2 (PHYSICS: Gibbs-Bogoliubov). The residual is h + V P + C^T lambda - phi with
+    F = omega - phi.P + h.P + P.V.P/2 (Gibbs-Bogoliubov). The residual is h + V P + C^T lambda - phi with
     the multipliers lambda that make it smallest; a remaining constraint error, up to `tolerance`, is removed from F
     to first order.
     """
