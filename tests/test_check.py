@@ -175,10 +175,10 @@ def test_a_charge_transfer_is_given_back_as_the_dirac_energy_of_the_band(graphen
 def test_energy_scales_are_given_in_meV_and_kelvin(template):
     """CODATA 2018: k = 0.08617333262 meV/K, mu_B = 0.057883818060 meV/T."""
     derived = derive(with_value(template, "magnetic_field.tesla", [0, 0, 10.0]))
-    assert derived.energy_scales_meV["temperature"] == pytest.approx(0.08617333262)
-    assert derived.energy_scales_K["temperature"] == pytest.approx(1)
+    assert derived.energy_scales_meV["temperature"] == 20
+    assert derived.energy_scales_K["temperature"] == pytest.approx(20 / 0.08617333262)
     assert derived.energy_scales_meV["electron_zeeman"] == pytest.approx(2 * 10 * 0.057883818060)
-    assert derived.energy_scales_K["kitaev"] == pytest.approx(-6 / 0.08617333262)
+    assert derived.energy_scales_K["kitaev"] == pytest.approx(6 / 0.08617333262)
 
 
 def test_zeeman_splitting_uses_the_g_tensor(template):
@@ -294,7 +294,7 @@ def test_the_table_shows_every_quantity_with_its_unit(template):
     rows = dict(table(derive(template)))
     assert rows["Dirac velocity"] == "6.944e+05 m/s"
     assert rows["lattice mismatch (a_c - a_s)/a_s"] == "-23.40 %"
-    assert rows["energy scale: temperature"] == "0.08617 meV = 1 K"
+    assert rows["energy scale: temperature"] == "20 meV = 232.1 K"
     assert "K folds onto" in rows["nearest common cell, spin layer"]
     assert derive(template).to_dict()["commensurate_cell"]["spin_cell"] == [[10, 0], [0, 10]]
 
@@ -303,10 +303,10 @@ def test_the_table_shows_every_quantity_with_its_unit(template):
 
 
 def test_templates_are_valid_and_say_that_they_are_invented(tmp_path):
-    material, sweep = write_templates(tmp_path / "new" / "folder")
+    material, sweep, heavy = write_templates(tmp_path / "new" / "folder")
     assert load_material(material).name.endswith("(invented)")
-    assert "INVENTED" in material.read_text()
-    assert "INVENTED" in sweep.read_text()
+    assert load_material(heavy).search.phase == "heavy-fermi-liquid"
+    assert all("INVENTED" in path.read_text() for path in (material, sweep, heavy))
     assert derive(load_material(material)).model_hopping_meV > 0
 
 

@@ -1,4 +1,4 @@
-"""Commented templates of the two files a user writes."""
+"""Commented templates of the files a user writes."""
 
 from functools import partial
 from importlib.resources import files
@@ -7,11 +7,12 @@ from pathlib import Path
 from kondomf.errors import InputError
 from kondomf.files import refuse_existing, write_atomically
 
-TEMPLATES = ("material.toml", "sweep.toml")
+TEMPLATES = ("material.toml", "sweep.toml", "heavy.toml")
+"""A material and a sweep over it for phase maps, and the material of a heavy Fermi liquid for its oscillations."""
 
 
 def write_templates(folder: str | Path, overwrite: bool = False) -> list[Path]:
-    """Write material.toml and sweep.toml into `folder`, which is created if needed; returns their paths.
+    """Write the templates into `folder`, which is created if needed; returns their paths.
 
     Raises InputError, before anything is written, if one of them exists and `overwrite` is false or the folder cannot
     be written.

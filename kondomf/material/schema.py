@@ -89,6 +89,12 @@ def _method(value: Any) -> Any:
     return value
 
 
+def _phase(value: Any) -> Any:
+    if value == "paramagnetic":
+        raise ValueError("no class of this version; mean_field.magnetic_channel = false keeps moments out")
+    return value
+
+
 Number = Annotated[float, BeforeValidator(_number)]
 WholeNumber = Annotated[int, BeforeValidator(_whole)]
 Vector = Annotated[Triple, BeforeValidator(_triple)]
@@ -214,8 +220,8 @@ class Zone(Section):
 class Search(Section):
     """Which states are searched, from how many starting points."""
 
-    phase: Literal["any", "decoupled", "paramagnetic", "heavy-fermi-liquid", "magnetic"] = Field(
-        "any", description='"any", "decoupled", "paramagnetic", "heavy-fermi-liquid" or "magnetic"'
+    phase: Annotated[Literal["any", "decoupled", "heavy-fermi-liquid", "magnetic"], BeforeValidator(_phase)] = Field(
+        "any", description='"any", "decoupled", "heavy-fermi-liquid" or "magnetic"'
     )
     starts: WholeNumber = Field(8, ge=1, description="the number of starting points, a whole number of at least 1")
     seed: WholeNumber = Field(1, ge=0, description="the seed of random starts, a whole number of at least 0")

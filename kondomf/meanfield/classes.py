@@ -4,7 +4,6 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import block_diag
 
-from kondomf.errors import InputError
 from kondomf.model import MeanFieldModel
 from kondomf.model.symmetries import rotate_channels
 
@@ -20,15 +19,7 @@ FREE = {
 
 
 def class_basis(model: MeanFieldModel, phase: str) -> Array | None:
-    """Orthonormal basis (Na, d) of the fields, among the active channels, that `phase` leaves free; None: all.
-
-    Raises InputError for a phase that the solver does not offer.
-    """
-    if phase not in FREE:
-        raise InputError(
-            f'search.phase = "{phase}" is not offered by this version, which minimises inside '
-            f"{', '.join(FREE)}; for states without moments set mean_field.magnetic_channel = false"
-        )
+    """Orthonormal basis (Na, d) of the fields, among the active channels, that `phase` leaves free; None: all."""
     if phase == "any":
         return None
     if phase == "heavy-fermi-liquid":

@@ -45,7 +45,7 @@ def solve(
     """Lowest state of `material` in its search.phase, from its seeded starts, `extra_starts` and their descents.
 
     `only_starts` replaces the standard starts. `progress` receives one line of text per finished start.
-    Numerical failure is the status of the result. Raises InputError for a phase the solver does not offer.
+    Numerical failure is the status of the result.
     """
     began = time.perf_counter()
     settings = settings or Settings()

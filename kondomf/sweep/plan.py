@@ -17,7 +17,7 @@ from kondomf.errors import InputError
 from kondomf.material import Material, load_material, material_from_dict, with_value
 from kondomf.sweep.record import Axis, PointKey
 
-PHASES = ("any", "decoupled", "paramagnetic", "heavy-fermi-liquid", "magnetic")
+PHASES = ("any", "decoupled", "heavy-fermi-liquid", "magnetic")
 """Classes inside which a point can be minimised."""
 
 Index = tuple[int, ...]
