@@ -5,6 +5,7 @@ from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
 from kondomf.errors import InputError
 from kondomf.material import Material
@@ -59,13 +60,14 @@ def solve(
     coarse = fine
     if material.zone.points >= COARSE_FROM:
         coarse = Problem(model, uniform(2 * (material.zone.points // 4), material.zone.offset), basis)
-    ends = _descend_all(coarse, chosen, settings, progress)
-    trials = tuple(_trial(model, end) for end in ends)
-    if coarse is not fine:
-        chosen = [Start(end.start.name, end.descent.point.p) for end in _distinct(model, ends)]
-        ends = _descend_all(fine, chosen, settings, None)
-    best = min(ends, key=lambda end: (not _converged(end, settings), end.free_energy))
-    solution = _with_evidence(fine, best, material, settings)
+    with threadpool_limits(1, user_api="blas"):  # the matrices are small: more threads only wait for each other
+        ends = _descend_all(coarse, chosen, settings, progress)
+        trials = tuple(_trial(model, end) for end in ends)
+        if coarse is not fine:
+            chosen = [Start(end.start.name, end.descent.point.p) for end in _distinct(model, ends)]
+            ends = _descend_all(fine, chosen, settings, None)
+        best = min(ends, key=lambda end: (not _converged(end, settings), end.free_energy))
+        solution = _with_evidence(fine, best, material, settings)
     evaluations = solution.evaluations + (coarse.matrices if coarse is not fine else 0)
     return replace(solution, trials=trials, evaluations=evaluations, wall_seconds=time.perf_counter() - began)
 

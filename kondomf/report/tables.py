@@ -59,7 +59,8 @@ def _search(summary: dict[str, Any]) -> str:
     others = ", ".join(
         f"{m['free_energy_meV_per_cell'] - minima[0]['free_energy_meV_per_cell']:+.4g}" for m in minima[1:]
     )
-    text = f"{minima[0]['found']} of {starts} ended at the lowest of {len(minima)} minima"
+    which = f"the lowest of {len(minima)} minima" if len(minima) > 1 else "the only minimum met"
+    text = f"{minima[0]['found']} of {starts} ended at {which}"
     text += f" (others at {others} meV)" if others else ""
     return f"{text}; chance that one more meets a new one about {summary['chance_of_another_minimum']:.0%}"
 
