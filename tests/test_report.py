@@ -353,7 +353,7 @@ def test_the_table_of_a_solution_tells_what_it_is_and_why(liquid):
         "meV per cell",
         "chemical potential",
         "zero modes",
-        "1 of 1 ended at the lowest",
+        "1 of 1 ended at the only minimum met",
     ):
         assert words in text, words
     assert "-0.0000" not in text
