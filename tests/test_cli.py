@@ -43,7 +43,8 @@ def test_an_unknown_command_or_option_is_a_usage_error_with_exit_code_2():
 
 def test_new_writes_files_that_check_accepts_and_refuses_to_overwrite_them(tmp_path):
     text = done("new", tmp_path / "demo")
-    assert text.splitlines() == [f"wrote {tmp_path / 'demo' / name}" for name in ("material.toml", "sweep.toml", "heavy.toml")]
+    names = ("material.toml", "sweep.toml", "heavy.toml")
+    assert text.splitlines() == [f"wrote {tmp_path / 'demo' / name}" for name in names]
     assert "Dirac velocity" in done("check", tmp_path / "demo" / "material.toml")
     refused(tmp_path, ["new", tmp_path / "demo"], "material.toml exists", "--overwrite")
     done("new", tmp_path / "demo", "--overwrite")
