@@ -1,6 +1,7 @@
 """Majorana representation and Wick decoupling against exact matrices in Fock space."""
 
 import itertools
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -248,7 +249,7 @@ def test_energy_entropy_and_free_energy_are_those_of_the_exact_gaussian_state(fo
         spin_layer__gamma_prime_meV=-0.2,
         spin_layer__heisenberg_3_meV=0.35,
     )
-    model = build_model(material).at_temperature(T)
+    model = replace(build_model(material), temperature=T)
     problem = Problem(model, TORUS)
     phi = T * np.random.default_rng(6).standard_normal(model.n_channels)
     state = problem.evaluate(phi)

@@ -1,6 +1,6 @@
 """The mean-field problem as data: channels, one-body fields, quadratic form, constraints."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from kondomf.model.lattice import MagneticCell
 from kondomf.model.majorana import PER_SITE
+from kondomf.model.terms import canonical
 
 Array = NDArray[np.float64]
 
@@ -99,8 +100,6 @@ class MeanFieldModel:
 
     def find(self, a: int, b: int, r: tuple[int, int]) -> tuple[int, int] | None:
         """Number and sign of the channel i gamma_a(0) gamma_b(R), or None if the model does not hold it."""
-        from kondomf.model.terms import canonical
-
         key, sign = canonical((a, (0, 0)), (b, r))
         p = self._index.get(key)
         return None if p is None else (p, sign)
@@ -108,7 +107,3 @@ class MeanFieldModel:
     @cached_property
     def _index(self) -> dict[tuple[int, ...], int]:
         return {tuple(int(x) for x in row): p for p, row in enumerate(self.table)}
-
-    def at_temperature(self, temperature: float) -> "MeanFieldModel":
-        """The same model at another k_B T (meV)."""
-        return replace(self, temperature=temperature)

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.errors import InputError
+from kondomf.report.outputs import plain
 from kondomf.report.style import CYCLE
 from kondomf.report.tables import align
 from kondomf.sweep import FAILED, Run
@@ -71,7 +72,7 @@ class PhaseMap:
             "phase": self.phase.tolist(),
             "status": self.status.tolist(),
             "cuts": {self.keys[1]: [float(self.y[cut]) for cut in self.cuts]},
-            **{name: [[_plain(v) for v in row] for row in values] for name, values in self.quantities.items()},
+            **{name: plain(values.tolist()) for name, values in self.quantities.items()},
         }
 
     def text(self) -> str:
@@ -235,7 +236,3 @@ def _points(count: int) -> str:
 def _pale(color: str) -> tuple[float, float, float]:
     red, green, blue = (0.6 + 0.4 * int(color[i : i + 2], 16) / 255 for i in (1, 3, 5))
     return red, green, blue
-
-
-def _plain(value: float) -> float | None:
-    return value if math.isfinite(value) else None

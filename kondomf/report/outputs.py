@@ -59,7 +59,7 @@ class Outputs:
 
     def report(self, result: Mapping[str, Any], text: str, echo: Callable[[str], Any]) -> None:
         """Print the text, and write the result as JSON if asked for; "-" prints the JSON and nothing else."""
-        document = json.dumps(_plain(result), indent=2, ensure_ascii=False, allow_nan=False)
+        document = json.dumps(plain(result), indent=2, ensure_ascii=False, allow_nan=False)
         if self.json is not None and str(self.json) == "-":
             echo(document)
             return
@@ -76,12 +76,12 @@ def _write_text(path: Path, text: str) -> None:
     path.write_text(text, encoding="utf-8")
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
     """What JSON can hold: numbers of numpy as Python's, NaN and infinities as null."""
     if isinstance(value, Mapping):
-        return {key: _plain(entry) for key, entry in value.items()}
+        return {key: plain(entry) for key, entry in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(entry) for entry in value]
+        return [plain(entry) for entry in value]
     if value is None or isinstance(value, str | int):
         return value
     number = float(value)
