@@ -11,6 +11,8 @@ _PUBLIC = {
     "solve": "kondomf.meanfield",
     "load_state": "kondomf.meanfield",
     "save_state": "kondomf.meanfield",
+    "follow_branches": "kondomf.meanfield",
+    "thermodynamics": "kondomf.meanfield",
     "summarize": "kondomf.phases",
     "open_run": "kondomf.sweep",
     "effective_model": "kondomf.effective",

@@ -12,6 +12,7 @@ import click
 from kondomf.errors import InputError
 
 if TYPE_CHECKING:
+    from kondomf.material import Material
     from kondomf.report.outputs import Outputs
 
 OBSERVABLES = ("magnetization", "grand_potential")
@@ -108,7 +109,9 @@ def check(material: Path, out: "Outputs") -> None:
 @click.option("--start", "start", metavar="NAME", help='use this standard start alone, e.g. "decoupled M1"')
 @click.option("--keep-saddle", is_flag=True, help="with --start: stop at the nearest stationary point, even a saddle")
 @click.option("--quiet", is_flag=True, help="do not report the starts as they finish")
-@outputs("json", "state")
+@click.option("--along", metavar="KEY=FROM:TO", help="follow every branch of minima along a number of the material")
+@click.option("--precision", type=float, metavar="NUMBER", help="with --along: of ends and transitions [default: 1e-4]")
+@outputs("json", "state", "figure", "data")
 @click.pass_context
 def solve(
     ctx: click.Context,
@@ -116,11 +119,17 @@ def solve(
     start: str | None,
     keep_saddle: bool,
     quiet: bool,
+    along: str | None,
+    precision: float | None,
     out: "Outputs",
 ) -> None:
-    """Find the lowest state of a MATERIAL and certify it. Exit code 1 if it is no minimum."""
+    """Find the lowest state of a MATERIAL and certify it. Exit code 1 if it is no minimum.
+
+    With --along KEY=FROM:TO, e.g. kondo.coupling_meV=0:3000: all branches of minima that searches at both ends and in
+    the middle meet are followed to their ends, with spinodals, continuous and first-order transitions.
+    """
     from kondomf.material import load_material
-    from kondomf.meanfield import Settings, named_start, save_state
+    from kondomf.meanfield import Settings, named_start, save_state, thermodynamics
     from kondomf.meanfield import solve as solve_material
     from kondomf.phases import summarize
     from kondomf.report.tables import LIMITS, solution_table
@@ -128,17 +137,45 @@ def solve(
     if keep_saddle and start is None:
         raise InputError("--keep-saddle studies one start: name it with --start")
     layers = load_material(material)
+    report = None if quiet else lambda text: click.echo(text, err=True)
+    if along is not None:
+        if start is not None or out.state is not None:
+            raise InputError("--along searches and follows all branches; leave out --start and --state")
+        _solve_along(layers, along, precision, report, out)
+        return
+    if precision is not None or out.figure is not None or out.data is not None:
+        raise InputError("--precision, --figure and --data belong to --along KEY=FROM:TO")
     solution = solve_material(
         layers,
         only_starts=None if start is None else [named_start(layers, start)],
         settings=Settings(keep_saddle=keep_saddle),
-        progress=None if quiet else lambda text: click.echo(text, err=True),
+        progress=report,
     )
     if out.state is not None:
         save_state(solution, out.state, overwrite=out.overwrite)
-    summary = summarize(solution)
+    summary = summarize(solution) | {"thermodynamics": thermodynamics(solution).to_dict()}
     out.report(summary, f"{solution_table(summary)}\n{LIMITS}", click.echo)
     ctx.exit(0 if solution.converged else EXIT_NUMERICS)
+
+
+def _solve_along(
+    material: "Material", along: str, precision: float | None, report: Callable[[str], None] | None, out: "Outputs"
+) -> None:
+    """Follow and report the branches along KEY=FROM:TO."""
+    from kondomf.meanfield import follow_branches
+    from kondomf.phases.along import describe
+    from kondomf.report.branches import draw_branches
+    from kondomf.report.tables import LIMITS, align
+
+    try:
+        key, _, ends = along.partition("=")
+        low, high = (float(end) for end in ends.split(":"))
+    except ValueError:
+        raise InputError(f"--along {along!r}: give KEY=FROM:TO like kondo.coupling_meV=0:3000") from None
+    found = describe(follow_branches(material, key, low, high, precision=precision, progress=report))
+    out.draw(lambda figure: draw_branches(figure, found), (7.0, 7.0))
+    out.write_columns(found.columns())
+    out.report(found.to_dict(), f"{align(found.rows())}\n{LIMITS}", click.echo)
 
 
 @main.command(epilog=example("kondomf bands state.h5 --figure bands.png --window 200"))

@@ -228,7 +228,7 @@ def test_a_state_file_that_is_none_is_refused(chain, tmp_path, command, damage):
     elif damage == "version":
         with h5py.File(path, "a") as file:
             file.attrs["schema"] = 7
-    fragments = {"missing": "no state file", "version": "of schema 7; this version reads state files of schema 1"}
+    fragments = {"missing": "no state file", "version": "of schema 7; this version reads state files of schema 2"}
     fragment = fragments.get(damage, "truncated or not HDF5")
     refused(tmp_path, [command, path, "--json", tmp_path / "out.json"], fragment, "--state")
 

@@ -61,11 +61,13 @@ def test_check_prints_derived_quantities_and_warnings_and_writes_them_as_json(tm
 
 def test_solve_prints_a_table_and_writes_every_promised_key(chain):
     text = (chain / "solve.txt").read_text()
-    assert text.startswith("phase               heavy Fermi liquid\n")
+    assert text.split("\n")[0].split(None, 1) == ["phase", "heavy Fermi liquid"]
+    assert "specific heat" in text
     assert "Mean-field theory of Majorana partons" in text
     assert (chain / "solve.log").read_text().startswith("start 1 (hybridized 0): minimum, F = ")
     result = json.loads((chain / "result.json").read_text())
     assert set(RESULT_KEYS) <= set(result)
+    assert result["thermodynamics"]["specific_heat_kB_per_cell"] > 0
     assert {"singlet", "triplet"} <= set(result["pairing"])
     assert {"broken_generators", "gauge_directions"} <= set(result["zero_modes"])
     assert result["status"] == "minimum-in-class"
@@ -95,7 +97,7 @@ def test_the_same_seed_gives_the_same_json_apart_from_the_time(tmp_path):
         results.append(json.loads(done("solve", material, "--json", "-", "--quiet")))
         assert results[-1].pop("wall_seconds") > 0
     assert results[0] == results[1]
-    assert results[0]["trials"][-1]["start"] == "random 1"
+    assert results[0]["trials"][-1]["start"].startswith("random ")
     assert results[0]["evaluations"] != results[2]["evaluations"]
 
 
@@ -145,6 +147,23 @@ def test_a_finished_sweep_is_shown_by_progress_and_map_and_started_again_compute
     assert len((tmp_path / "m.csv").read_text().splitlines()) == 5
     assert (tmp_path / "m.svg").read_bytes().startswith(b"<?xml")
     done("map", run, "--figure", tmp_path / "cut.png", "--cut", "conduction_layer.filling=1")
+
+
+def test_solve_along_follows_the_branches_and_writes_figure_table_and_json_of_the_same_numbers(tmp_path):
+    material = write(tmp_path, {"search.phase": "any", "zone.points": 4, "search.starts": 3})
+    outputs = {kind: tmp_path / f"along.{kind}" for kind in ("json", "csv", "png")}
+    options = ["--json", outputs["json"], "--data", outputs["csv"], "--figure", outputs["png"]]
+    text = done("solve", material, "--along", "mean_field.temperature_meV=40:400", "--precision", 0.5, *options)
+    found = json.loads(outputs["json"].read_text())
+    assert f"branch {len(found['branches'])}" in text
+    states = sum(len(branch["states"]["x"]) for branch in found["branches"])
+    lines = outputs["csv"].read_text().splitlines()
+    assert lines[0].startswith("branch,mean_field.temperature_meV,free_energy_meV_per_cell")
+    assert len(lines) == states + 1
+    assert outputs["png"].stat().st_size > 10_000
+    transition = found["transitions"][-1]
+    assert (transition["kind"], transition["lowest"]) == ("continuous", True)  # the hybridization melts
+    assert 40 < transition["at"] < 400
 
 
 def test_an_output_is_replaced_on_request(chain, tmp_path):
@@ -206,6 +225,16 @@ def test_an_interrupted_solve_ends_with_exit_code_130_and_leaves_nothing(tmp_pat
     [
         (["solve", "material.toml", "--start", "decoupled"], "the starts are decoupled 0, hybridized 0"),
         (["solve", "material.toml", "--keep-saddle"], "--keep-saddle studies one start: name it with --start"),
+        (["solve", "material.toml", "--along", "kondo"], "--along 'kondo': give KEY=FROM:TO like kondo.coupling_meV="),
+        (["solve", "material.toml", "--along", "kondo.coupling_meV=2:1"], "give FROM below TO"),
+        (["solve", "material.toml", "--along", "zone.points=2:4"], "zone.points is no coupling"),
+        (["solve", "material.toml", "--along", "kondo.j=1:2"], "kondo.j is no numeric key of a material"),
+        (["solve", "material.toml", "--along", "conduction_layer.filling=1:3"], "filling"),
+        (
+            ["solve", "material.toml", "--along", "kondo.coupling_meV=1:2", "--start", "decoupled 0"],
+            "leave out --start",
+        ),
+        (["solve", "material.toml", "--figure", "f.png"], "belong to --along KEY=FROM:TO"),
         (["bands", "state.h5", "--window", "0"], "--window 0: give a finite energy in meV above zero"),
         (["bands", "state.h5", "--window", "nan"], "--window nan: give a finite energy"),
         (["bands", "state.h5", "--window", "inf"], "--window inf: give a finite energy"),

@@ -199,6 +199,7 @@ REASONS = {
     "kitaev_meV must be equal": ("kitaev_meV = 300.0", "kitaev_meV = [300.0, 300.0, 301.0]\ngamma_meV = 1.0"),
     "further exchange must vanish": ("kitaev_meV = 300.0", "kitaev_meV = 300.0\nheisenberg_3_meV = 1.0"),
     "nearest-neighbour hopping alone": ("hopping_meV = 1000.0", "hopping_meV = 1000.0\nrashba_meV = 1.0"),
+    "neighbour_coupling_meV must vanish": ("[mean_field]", "neighbour_coupling_meV = 1.0\n[mean_field]"),
     "anisotropy must be [1, 1, 1]": ("coupling_meV = 1600.0", "coupling_meV = 1600.0\nanisotropy = [1, 1, 0.5]"),
     "magnetic_field.tesla must vanish": ("[mean_field]", "[magnetic_field]\ntesla = [0, 0, 1]\n[mean_field]"),
 }
@@ -328,19 +329,18 @@ def damage(path, how):
             file["x"] = 1
     else:
         with h5py.File(path, "a") as file:
-            evidence = json.loads(file.attrs["evidence"])
             if how == "schema":
-                file.attrs["schema"] = 2
+                file.attrs["schema"] = 1
             elif how == "array":
                 del file["phi"]
             elif how == "inputs":
                 file.attrs["inputs"] = '{"name": "x"}'
             elif how == "channels":
                 file["channels"][0, 0] += 1
-            elif how == "unknown evidence":
-                file.attrs["evidence"] = json.dumps(evidence | {"mood": "good"})
-            elif how == "no evidence":
-                file.attrs["evidence"] = "{}"
+            else:
+                evidence = json.loads(file["evidence"].asstr()[()]) | {"mood": "good"}
+                del file["evidence"]
+                file["evidence"] = json.dumps(evidence) if how == "unknown evidence" else "{}"
 
 
 @pytest.mark.parametrize(
@@ -349,13 +349,13 @@ def damage(path, how):
         ("truncated", "truncated or not HDF5"),
         ("text", "truncated or not HDF5"),
         ("empty", "truncated or not HDF5"),
-        ("foreign", "an HDF5 file of another kind; this version reads state files of schema 1"),
-        ("schema", "a kondomf state file of schema 2; this version reads state files of schema 1"),
+        ("foreign", "an HDF5 file of another kind; this version reads state files of schema 2"),
+        ("schema", "a kondomf state file of schema 1; this version reads state files of schema 2"),
         ("array", "truncated or not HDF5"),
         ("inputs", "section .spin_layer. is missing"),
         ("channels", "other channels than this version builds"),
         ("unknown evidence", "other evidence than this version reads .*mood"),
-        ("no evidence", "other evidence than this version reads .*trials"),
+        ("no evidence", "other evidence than this version reads .*zero_modes"),
     ],
 )
 def test_a_damaged_or_foreign_state_file_is_refused_and_left_alone(tmp_path, small, how, message):

@@ -219,6 +219,7 @@ def exact_torus(material):
         local = spins(GAMMA16, material.mean_field.kondo_form, site)
         for axis, factor in enumerate(kondo.anisotropy):
             h += kondo.coupling_meV * factor * local[axis] @ small[site][axis]
+            h += 3 * kondo.neighbour_coupling_meV * factor * local[axis] @ small[1 - site][axis]
         field = BOHR_MAGNETON * np.array(material.magnetic_field.tesla)
         for zeeman, s in ((field @ layer.g_tensor, big[site]), (field @ electrons.g_tensor, small[site])):
             h += sum(value * x for value, x in zip(zeeman, s, strict=True))
@@ -241,6 +242,7 @@ def test_energy_entropy_and_free_energy_are_those_of_the_exact_gaussian_state(fo
         form=form,
         mean_field__kondo_form=kondo_form,
         kondo__anisotropy=[1.0, 0.8, 1.3],
+        kondo__neighbour_coupling_meV=-0.45,
         magnetic_field__tesla=[900.0, -2000.0, 1500.0],
         spin_layer__g_factor=[2.0, 2.5],
         conduction_layer__sublattice_offset_meV=0.6,

@@ -1,13 +1,11 @@
-"""The solver: published limits, check values, certified saddles, descents that never rise, classes of states."""
+"""The solver: published limits, check values, certified saddles, descents that never rise."""
 
 import numpy as np
 import pytest
 from materials import T, dimensionless
 from scipy.optimize import brentq
 
-from kondomf.errors import InputError
 from kondomf.meanfield import Settings, Start, named_start, solve
-from kondomf.meanfield.classes import class_basis
 from kondomf.meanfield.driver import descend
 from kondomf.meanfield.evaluate import bloch_matrix
 from kondomf.meanfield.problem import Problem, point_at
@@ -15,7 +13,7 @@ from kondomf.meanfield.starts import spin_liquid, starts
 from kondomf.meanfield.zone import uniform
 from kondomf.model import build_model
 from kondomf.model.lattice import FIRST
-from kondomf.model.majorana import ELECTRON, SPINON, majorana, spinor
+from kondomf.model.majorana import ELECTRON, SPINON, majorana
 
 COPIES = ["0", "M1", "M2", "M3"]
 VAN_HOVE = {"kondo": 3.5, "filling": 0.75, "magnetic": False}
@@ -253,88 +251,3 @@ def test_the_entropy_is_minus_the_temperature_derivative_of_f_at_a_solution(keys
     slope = (energy(above) - energy(below)) / (2 * step)
     assert middle.entropy_kB_per_cell == pytest.approx(-slope, rel=1e-3)
     assert middle.entropy_kB_per_cell > 0.1
-
-
-# ---- classes -----------------------------------------------------------------------------------------------------
-
-
-def anomalous(solution, species):
-    """Largest |<c c>| of any two complex fermions of the given species, at any distance."""
-    rows = np.zeros((4, 16), complex)
-    for site in (0, 1):
-        rows[2 * site : 2 * site + 2, 8 * site + 4 * species : 8 * site + 4 * species + 4] = spinor(site)
-    return np.abs(rows @ solution.correlators @ rows.T).max()
-
-
-def test_the_heavy_fermi_liquid_is_a_minimum_of_its_class_without_pairing_that_breaks_nothing():
-    """t = 1, K = 0.3, J_K = 2.2, n = 0.9, T = 0.02 on 48 x 48: an independent implementation and the reduced equations
-    of the phase; w is the isotropic hybridization, q = (2/3)<g f+f> the bond field."""
-    material = dimensionless(
-        0.3,
-        2.2,
-        0.9,
-        form="so4",
-        magnetic=False,
-        temperature=0.02,
-        points=48,
-        search__phase="heavy-fermi-liquid",
-        search__starts=1,
-    )
-    solution = solve(material)
-    assert solution.status == "minimum-in-class"
-    assert energy(solution) == pytest.approx(-3.18851111, abs=1e-8)
-    assert singular_values(solution) == pytest.approx(np.full(4, 0.50346357), abs=1e-6)
-    assert solution.chemical_potential_meV / T == pytest.approx(-0.47737474, abs=1e-6)
-    interaction = solution.p @ solution.model.v @ solution.p / 2 / T
-    assert interaction == pytest.approx(-0.75 * 2.2 * 0.50346357**2 - 0.375 * 0.3 * 0.38937335**2, abs=1e-7)
-    assert anomalous(solution, ELECTRON) < 1e-10
-    modes = solution.zero_modes
-    assert (modes.count, modes.gauge, modes.broken_generators, modes.unexplained) == (6, 6, 0, 0)
-    assert solution.curvature_full_space == pytest.approx(0, abs=1e-6)
-
-
-def test_fields_of_the_heavy_fermi_liquid_class_conserve_charge_and_time_reversal():
-    model = build_model(dimensionless(0.3, 2.2, 0.9, form="so4"))
-    basis = class_basis(model, "heavy-fermi-liquid")
-    assert basis.T @ basis == pytest.approx(np.eye(basis.shape[1]))
-    phi = model.h.copy()
-    phi[model.active] += T * basis @ np.random.default_rng(8).standard_normal(basis.shape[1])
-    state = Problem(model, uniform(3, "c3")).evaluate(phi)
-    g = state.correlators
-    rows = np.zeros((8, 16), complex)
-    for site, species in np.ndindex(2, 2):
-        place = 4 * site + 2 * species
-        rows[place : place + 2, 8 * site + 4 * species : 8 * site + 4 * species + 4] = spinor(site)
-    assert np.abs(rows @ g @ rows.T).max() < 1e-12
-    assert np.abs(rows.conj() @ g @ rows.T).max() > 0.1
-    onsite = g[np.flatnonzero(~model.lattice_vectors.any(axis=1))[0]]
-    for start in range(0, 16, 4):
-        block = onsite[start : start + 4, start : start + 4]
-        assert [block[0, a] - block[b, c] for a, b, c in ((1, 2, 3), (2, 3, 1), (3, 1, 2))] == pytest.approx([0] * 3)
-
-
-@pytest.mark.parametrize("phase", ["decoupled", "magnetic"])
-def test_classes_without_hybridization_have_none_and_tell_their_curvature_in_the_space_of_all_fields(phase):
-    material = dimensionless(1.0, 3.2, magnetic=False, points=6, search__phase=phase, search__starts=4)
-    solution = solve(material)
-    assert solution.status == "minimum-in-class"
-    assert np.abs(solution.p[solution.model.hybridization]).max() < 1e-12
-    assert solution.curvature_min > 0
-    assert solution.curvature_full_space < -0.1
-
-
-def test_moments_are_free_in_the_class_magnetic_and_absent_in_the_class_decoupled():
-    keys = {"kitaev": 0.0, "spin_layer__heisenberg_meV": -1.0, "form": "so4", "points": 4}
-    found = {phase: solve(dimensionless(search__phase=phase, **keys)) for phase in ("decoupled", "magnetic")}
-    moment = {phase: np.abs(home(solution)[0, 1:4]).max() for phase, solution in found.items()}
-    assert moment["decoupled"] < 1e-12
-    assert moment["magnetic"] > 0.5
-    # Free spinons have an entropy ln 4 per site, a saturated ferromagnet -|J|/4 on each of its three bonds per cell.
-    electrons = energy(solved("decoupled 0", kitaev=0.0, points=4)) + 0.005 * 2 * np.log(4)
-    assert energy(found["magnetic"]) == pytest.approx(electrons - 0.75, abs=1e-6)
-    assert energy(found["decoupled"]) > energy(found["magnetic"]) + 0.1
-
-
-def test_a_phase_that_is_not_offered_is_an_input_error_that_names_the_others():
-    with pytest.raises(InputError, match=r"paramagnetic.*decoupled"):
-        solve(dimensionless(search__phase="paramagnetic"))

@@ -167,6 +167,7 @@ def _check_isotropic(material: Material) -> None:
         "the conduction layer must have nearest-neighbour hopping alone": any(
             (electrons.next_hopping_meV, electrons.sublattice_offset_meV, electrons.kane_mele_meV, electrons.rashba_meV)
         ),
+        "kondo.neighbour_coupling_meV must vanish": material.kondo.neighbour_coupling_meV != 0,
         "kondo.anisotropy must be [1, 1, 1]": set(material.kondo.anisotropy) != {1.0},
         "magnetic_field.tesla must vanish": any(material.magnetic_field.tesla),
     }

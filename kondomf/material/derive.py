@@ -142,6 +142,7 @@ def _energy_scales(material: Material) -> dict[str, float]:
         "kitaev": max(spin.kitaev_meV, key=abs),
         "heisenberg": spin.heisenberg_meV,
         "kondo": material.kondo.coupling_meV,
+        "neighbour_kondo": material.kondo.neighbour_coupling_meV,
         "temperature": material.temperature_meV,
         "spin_zeeman": _zeeman(spin.g_tensor, material),
         "electron_zeeman": _zeeman(material.conduction_layer.g_tensor, material),
@@ -168,7 +169,8 @@ def _warnings(material: Material) -> Iterator[str]:
             f"temperature {temperature:.3g} meV is small against the level spacing {spacing:.3g} meV of the zone grid: "
             f"fine Fermi-surface features are not resolved; raise the temperature or zone.points (to about {needed})"
         )
-    if material.kondo.coupling_meV == 0 or not any(material.kondo.anisotropy):
+    kondo = material.kondo
+    if not any((kondo.coupling_meV, kondo.neighbour_coupling_meV)) or not any(kondo.anisotropy):
         yield "the Kondo coupling is zero: the layers do not see each other"
 
 

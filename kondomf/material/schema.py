@@ -26,6 +26,16 @@ NAMED_CELLS = {"1x1": ((1, 0), (0, 1)), "1x2": ((1, 0), (-1, 2)), "sqrt3": ((1, 
 """Magnetic cells in units of (a1, a2); 1x2 is the rectangle with sides a and sqrt(3) a."""
 DOPING_KEYS = ("filling", "charge_transfer_meV", "density_per_cm2")
 TEMPERATURE_KEYS = ("temperature_K", "temperature_meV")
+NEEDS_SO4 = {
+    "heavy-fermi-liquid": 'search.phase = "heavy-fermi-liquid" is no stationary state of the kitaev form: it breaks '
+    "the local SU(2) symmetry, so that the electrons pair explicitly; set mean_field.exchange_form and "
+    'mean_field.kondo_form to "so4", or search another phase',
+    "paramagnetic": 'search.phase = "paramagnetic" cannot hold a hybridization in the kitaev form: that form keeps '
+    "time reversal only if it leaves the spinons alone up to a sign, which no hybridization survives; set "
+    'mean_field.exchange_form and mean_field.kondo_form to "so4", or mean_field.magnetic_channel = false to suppress '
+    'the moments, or search.phase = "decoupled"',
+}
+"""Classes that a form other than so4 cannot hold, and why."""
 
 
 def _number(value: Any) -> float:
@@ -86,12 +96,6 @@ def _even(value: int) -> int:
 def _method(value: Any) -> Any:
     if value == "adaptive":
         raise ValueError("this version sums over uniform grids only")
-    return value
-
-
-def _phase(value: Any) -> Any:
-    if value == "paramagnetic":
-        raise ValueError("no class of this version; mean_field.magnetic_channel = false keeps moments out")
     return value
 
 
@@ -172,10 +176,18 @@ class ConductionLayer(Section):
 
 
 class Kondo(Section):
-    """Exchange sum_a J_a S_a s_a between a spin and the conduction electrons of its site, J_a = J_K anisotropy_a."""
+    """Exchange sum_a J_a S_a s_a between a spin and the conduction electrons of its site, J_a = J_K anisotropy_a.
+
+    The neighbour coupling J_1 adds the same with the electrons of each of the three neighbouring sites.
+    """
 
     coupling_meV: Number = Field(description="the Kondo coupling J_K in meV (positive: antiferromagnetic)")
-    anisotropy: Vector = Field((1.0, 1.0, 1.0), description="three numbers that multiply J_K along the spin axes")
+    anisotropy: Vector = Field(
+        (1.0, 1.0, 1.0), description="three numbers that multiply J_K and J_1 along the spin axes"
+    )
+    neighbour_coupling_meV: Number = Field(
+        0.0, description="the Kondo coupling J_1 to the electrons of each first-neighbour site in meV, any number"
+    )
 
 
 class MagneticField(Section):
@@ -220,8 +232,8 @@ class Zone(Section):
 class Search(Section):
     """Which states are searched, from how many starting points."""
 
-    phase: Annotated[Literal["any", "decoupled", "heavy-fermi-liquid", "magnetic"], BeforeValidator(_phase)] = Field(
-        "any", description='"any", "decoupled", "heavy-fermi-liquid" or "magnetic"'
+    phase: Literal["any", "decoupled", "paramagnetic", "heavy-fermi-liquid", "magnetic"] = Field(
+        "any", description='"any", "decoupled", "paramagnetic", "heavy-fermi-liquid" or "magnetic"'
     )
     starts: WholeNumber = Field(8, ge=1, description="the number of starting points, a whole number of at least 1")
     seed: WholeNumber = Field(1, ge=0, description="the seed of random starts, a whole number of at least 0")
@@ -242,11 +254,12 @@ class Material(Section):
     @model_validator(mode="after")
     def _consistent(self) -> Self:
         forms = (self.mean_field.exchange_form, self.mean_field.kondo_form)
-        if self.search.phase == "heavy-fermi-liquid" and forms != ("so4", "so4"):
+        if self.search.phase in NEEDS_SO4 and forms != ("so4", "so4"):
+            raise ValueError(NEEDS_SO4[self.search.phase])
+        if self.search.phase == "paramagnetic" and any(self.magnetic_field.tesla):
             raise ValueError(
-                'search.phase = "heavy-fermi-liquid" is no stationary state of the kitaev form: it breaks the local '
-                "SU(2) symmetry, so that the electrons pair explicitly; set mean_field.exchange_form and "
-                'mean_field.kondo_form to "so4", or search another phase'
+                'search.phase = "paramagnetic" keeps time reversal, which magnetic_field.tesla breaks; set the field '
+                "to zero, or search another phase"
             )
         if not 0 < self.model_filling < 2:
             raise ValueError(

@@ -11,11 +11,11 @@ from kondomf.meanfield.problem import Point, Problem, point_at
 
 Array = NDArray[np.float64]
 
-DRIVER = "evr"
-"""LAPACK's divide and conquer, numpy's choice, has failed to converge on well-conditioned matrices met here."""
 NULL = 1e-13
 """Directions whose response is below this fraction of the largest do not change the state: curvature 1."""
 
+SAME_FIELDS = 1e-12
+"""Fields that differ by less, in units of the largest coupling, are the same."""
 FROZEN = 1e-6
 """A constrained quantity that responds by less than this fraction (of a root of the response) needs no projection."""
 
@@ -27,11 +27,13 @@ class Curvature:
     eigenvalues : (d,) ascending, dimensionless (fixed-point directions count 1).
     root_vectors : (Na, d), R times the eigenvectors: change of the correlators P along each mode, unit of 1/sqrt(meV).
     v : (Na, Na) quadratic form among the active channels.
+    feedback : (Na, Na) change C^T dlambda of the multipliers' fields that answers one of the active fields, first order.
     """
 
     eigenvalues: Array
     root_vectors: Array
     v: Array
+    feedback: Array
 
     @property
     def lowest(self) -> float:
@@ -43,8 +45,9 @@ class Curvature:
         return self.root_vectors.T @ active_fields
 
     def fields(self, y: Array, rest: Array, nu: float) -> Array:
-        """Change of the active fields (rest + V R y)/(1 + nu) of the regularised step."""
-        return (rest + self.v @ (self.root_vectors @ y)) / (1 + nu)
+        """Change of the active fields (rest + V R y)/(1 + nu) + C^T dlambda of the regularised step."""
+        change = (rest + self.v @ (self.root_vectors @ y)) / (1 + nu)
+        return change + self.feedback @ change
 
 
 def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) -> Curvature:
@@ -57,26 +60,48 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
     v = model.v[np.ix_(active, active)]
     c = model.c[:, active]
     basis = None if full_space else problem.basis
-    if basis is not None:
-        m, c = basis.T @ m @ basis, c @ basis
-    size, q = eigh((m + m.T) / 2, driver=DRIVER)
+    if basis is None:
+        return spectral_form(m, c, v)
+    inside = spectral_form(basis.T @ m @ basis, c @ basis, basis.T @ v @ basis)
+    return Curvature(inside.eigenvalues, basis @ inside.root_vectors, v, basis @ inside.feedback @ basis.T)
+
+
+def _eigh(matrix: Array) -> tuple[Array, Array]:
+    """Eigenvalues and eigenvectors. LAPACK's divide and conquer and, rarely, its MRRR fail on matrices met here; the
+    slower QR does not."""
+    try:
+        return eigh(matrix, driver="evr")
+    except np.linalg.LinAlgError:
+        return eigh(matrix, driver="ev")
+
+
+def spectral_form(m: Array, c: Array, v: Array) -> Curvature:
+    """Spectral form of H = 1 + R^T V R with R R^T = M - M C^T (C M C^T)^-1 C M.
+
+    m, v : (n, n) minus the response, in 1/meV, and the quadratic form, in meV; c : (k, n) constraints.
+    """
+    size, q = _eigh((m + m.T) / 2)
     largest = max(size.max(initial=0.0), 1e-300)
     keep = size > NULL * largest
     r = q[:, keep] * np.sqrt(size[keep])
     # (C M C^T)^-1 loses all digits where a constrained quantity is frozen (a gap at low T): the same projection on
     # orthonormal directions of r^T C^T leaves out those that are rounding noise.
-    u, sizes, _ = np.linalg.svd(r.T @ c.T, full_matrices=False)
-    u = u[:, sizes > FROZEN * np.sqrt(largest)]
+    u, sizes, w = np.linalg.svd(r.T @ c.T, full_matrices=False)
+    free = sizes > FROZEN * np.sqrt(largest)
+    u = u[:, free]
+    feedback = -c.T @ (w[free].T / sizes[free]) @ (r @ u).T
     r = r - (r @ u) @ u.T
-    if basis is not None:
-        r = basis @ r
-    eigenvalues, z = eigh(np.eye(r.shape[1]) + r.T @ v @ r, driver=DRIVER)
-    return Curvature(eigenvalues, r @ z, v)
+    eigenvalues, z = _eigh(np.eye(r.shape[1]) + r.T @ v @ r)
+    return Curvature(eigenvalues, r @ z, v, feedback)
 
 
 def gauge_copies(problem: Problem, point: Point) -> list[Point]:
-    """The other three gauge copies of a decoupled point: the same state, which sees other uniform hybridizations.
+    """The other gauge copies of a decoupled point: the same state, which sees other uniform hybridizations.
 
-    Their F agree only on a zone rule with shifts by half a reciprocal vector (even points), so each is evaluated anew.
+    Left out are those of the same curvature: copies that are gauge transformations of the cell, and those of the same
+    fields (a magnet without bonds). On a zone rule with shifts by half a reciprocal vector (even points) the copies
+    agree in F; elsewhere they do not, so each is evaluated anew.
     """
-    return [point_at(problem, signs * point.phi) for signs in problem.model.gauge_signs[1:]]
+    model = problem.model
+    fields = [model.gauge_signs[copy] * point.phi for copy in model.distinct_copies[1:]]
+    return [point_at(problem, phi) for phi in fields if np.abs(phi - point.phi).max() > SAME_FIELDS * model.scale]

@@ -8,14 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies
-from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, Point, Problem, point_at
+from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, ROUNDING, Point, Problem, point_at
 from kondomf.meanfield.steps import Mixing, StationaryNewton, Step, TrustRegion
 
 Array = NDArray[np.float64]
 
-ROUNDING = 1e-11
-"""Rounding error of F in units of the largest coupling; a rise within it is none."""
-MOST_CORRECTIONS = 2
+MOST_CORRECTIONS = 1
 
 
 @dataclass(frozen=True)
@@ -32,7 +30,7 @@ class Settings:
     residual: float = 1e-9
     curvature: float = 1e-6
     decoupled: float = 1e-6
-    mixing_steps: int = 8
+    mixing_steps: int = 4
     newton_steps: int = 120
     keep_saddle: bool = False
 
@@ -115,7 +113,8 @@ def _go_down(
             left_saddle, memory = point, step.init()
         change, memory = step.propose(problem, point, memory)
         trial = _trial(problem, point, step, change, memory)
-        accepted = trial.is_finite and step.improves(point, trial, ROUNDING * scale)
+        solved = trial.constraint_error <= max(10 * CONSTRAINT_TOLERANCE, point.constraint_error)
+        accepted = trial.is_finite and solved and step.improves(point, trial, ROUNDING * scale)
         memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
         if accepted:
             point = trial
@@ -157,7 +156,8 @@ def _trial(problem: Problem, point: Point, step: Step, change: Array, memory: An
             break
         trial = corrected
     # Where the constrained quantities hardly respond, the second order is not small: F is compared without it.
-    return point_at(problem, trial.phi) if trial.is_finite and trial.constraint_error > CONSTRAINT_TOLERANCE else trial
+    solved = trial.constraint_error <= CONSTRAINT_TOLERANCE or not trial.is_finite
+    return trial if solved else point_at(problem, trial.phi)
 
 
 def _moved(problem: Problem, point: Point, change: Array, tolerance: float) -> Point:

@@ -17,6 +17,8 @@ CHUNK = 4096
 """Wave vectors worked on at a time; bounds the memory."""
 BLOCK = 2**17
 """Numbers in one packed block of the response; fits the processor's cache."""
+KEPT = 2**21
+"""Freed arrays of up to this many numbers (16 MB) are to stay with the process."""
 
 
 @dataclass(frozen=True)
@@ -35,6 +37,15 @@ class Evaluation:
     p: Array
     correlators: Array
     chunks: tuple[tuple[slice, Array, Complex], ...]
+
+
+def keep_freed_memory() -> None:
+    """Make glibc keep freed arrays, which doubles the speed of `response`; elsewhere it does nothing.
+
+    It gives large freed arrays back to the system, so that each new one costs page faults, until it has seen a
+    larger one freed: mallopt(3), "dynamic adjustment of the mmap threshold".
+    """
+    np.empty(KEPT)
 
 
 def bloch_matrix(model: MeanFieldModel, phi: Array, phases: Complex) -> Complex:

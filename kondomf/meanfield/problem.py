@@ -1,11 +1,11 @@
 """A constrained mean-field problem and its points: fields whose multipliers have been solved."""
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.meanfield.evaluate import Evaluation, evaluate, response
+from kondomf.meanfield.evaluate import Evaluation, evaluate, keep_freed_memory, response
 from kondomf.meanfield.zone import ZoneRule
 from kondomf.model import MeanFieldModel
 
@@ -14,6 +14,13 @@ Array = NDArray[np.float64]
 CONSTRAINT_TOLERANCE = 1e-10
 """Largest allowed error of a constrained quantity in a solution. It enters F only in second order."""
 MAX_MULTIPLIER_EVALUATIONS = 250
+RAISED = 0.1
+"""Temperature, in units of the largest coupling, at which no constrained quantity is frozen."""
+FROZEN = 1e-8
+"""Constrained quantities that respond by less than this, per largest coupling, are frozen."""
+ROUGH = 1e-3
+ROUNDING = 1e-11
+"""Rounding error of F in units of the largest coupling; a rise within it is none."""
 
 
 @dataclass
@@ -28,10 +35,20 @@ class Problem:
     basis: Array | None = None
     matrices: int = field(default=0, init=False, compare=False)
 
+    def __post_init__(self) -> None:
+        keep_freed_memory()
+
     def evaluate(self, phi: Array) -> Evaluation:
         """Evaluation with kept eigen-decomposition, counted."""
         self.matrices += len(self.zone.k)
         return evaluate(self.model, self.zone, phi, keep=True)
+
+    def first_fields(self, p: Array) -> Array:
+        """Fields h + V P (N,) of correlators p (N,), brought into the class."""
+        model = self.model
+        fields = model.h + model.v @ p
+        fields[model.active] = model.h[model.active] + self.project((model.v @ p)[model.active])
+        return fields
 
     def project(self, active_fields: Array) -> Array:
         """Part of a vector over the active channels that lies in the class, (Na,)."""
@@ -85,21 +102,37 @@ def _solve_multipliers(problem: Problem, phi: Array, tolerance: float) -> tuple[
     The response of a constrained quantity vanishes at Dirac points, in gaps and on coarse grids at low T. There a
     Newton step is cut to the largest coupling and the root of the directional derivative, which falls along
     the line, is bracketed.
+    Where T is far below a gap, a whole range of multipliers satisfies the constraints within every tolerance, with the
+    same state but different curvatures; near its ends the quadratic expansion of F reaches nowhere. The multipliers
+    of a raised temperature, found first, lie well inside.
     """
     model = problem.model
     channels = model.constrained
     c = model.c[:, channels]
     state = problem.evaluate(phi)
+    raised = RAISED * model.scale
     budget = problem.matrices + MAX_MULTIPLIER_EVALUATIONS * len(problem.zone.k)
     while problem.matrices < budget:
         gradient = model.c @ state.p - model.target
         if np.abs(gradient).max() <= tolerance or not np.isfinite(gradient).all():
             break
         m, q = np.linalg.eigh(-c @ response(model, problem.zone, state, channels) @ c.T)
+        if m[0] * model.scale < FROZEN and model.temperature < raised:
+            phi, raised = _raised_multipliers(problem, phi, raised), 0.0
+            state = problem.evaluate(phi)
+            continue
         g = q.T @ gradient
-        step = q @ (g / np.maximum(m, np.abs(g) / model.scale + 1e-300))
+        step = q @ np.where(np.abs(g) < 0.1 * tolerance, 0.0, g / np.maximum(m, np.abs(g) / model.scale + 1e-300))
         phi, state = _line_search(problem, phi, model.c.T @ step, step, float(gradient @ step), budget)
     return phi, state
+
+
+def _raised_multipliers(problem: Problem, phi: Array, temperature: float) -> Array:
+    """Fields (N,) whose multipliers satisfy the constraints roughly at another temperature (meV)."""
+    raised = replace(problem, model=replace(problem.model, temperature=temperature))
+    phi, _ = _solve_multipliers(raised, phi, ROUGH)
+    problem.matrices += raised.matrices
+    return phi
 
 
 def _line_search(

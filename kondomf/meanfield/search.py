@@ -1,4 +1,4 @@
-"""Finds the lowest state of a material: many starts, distinct ends, evidence for the best."""
+"""Finds the lowest state of a material and the other minima: many starts, distinct ends, evidence for each."""
 
 import time
 from collections.abc import Callable, Iterable
@@ -9,30 +9,43 @@ from threadpoolctl import threadpool_limits
 
 from kondomf.errors import InputError
 from kondomf.material import Material
-from kondomf.meanfield.classes import class_basis
+from kondomf.meanfield.classes import CLASSES, class_basis
+from kondomf.meanfield.curvature import Curvature, curvature_at
 from kondomf.meanfield.driver import Descent, Settings, certify, descend
-from kondomf.meanfield.problem import Problem, point_at
-from kondomf.meanfield.solution import Solution, Trial
+from kondomf.meanfield.problem import Point, Problem, point_at
+from kondomf.meanfield.solution import SAME_ENERGY, Solution, Trial, trial
 from kondomf.meanfield.starts import Start, standard_starts, starts
-from kondomf.meanfield.zero_modes import zero_modes
+from kondomf.meanfield.zero_modes import SoftMode, ZeroModes, soft_mode, zero_modes
 from kondomf.meanfield.zone import uniform
-from kondomf.model import MeanFieldModel, build_model
+from kondomf.model import build_model
 
 COARSE_FROM = 16
 """Grids of at least this many points a direction are searched at half the points first."""
-WINDOW = 5e-3
-"""Distinct ends of a coarse search within this of the lowest, in units of the largest coupling, are refined."""
-MOST_REFINED = 3
+MOST_KEPT = 6
+"""Distinct ends of a search that are refined and certified, the lowest first."""
+FEASIBLE = 1e-6
+"""Largest constraint error of a point whose F bounds that of the lowest state."""
 
 
 @dataclass(frozen=True)
 class _End:
-    start: Start
+    """Where a start, the `number`-th, ended; `found` counts the starts that ended in the same minimum."""
+
+    trial: Trial
     descent: Descent
+    number: int
+    found: int = 1
 
     @property
     def free_energy(self) -> float:
-        return self.descent.point.free_energy
+        """F in meV per magnetic cell; infinite where it is no number."""
+        value = self.descent.point.free_energy
+        return value if np.isfinite(value) else np.inf
+
+    @property
+    def settled(self) -> bool:
+        """True for a minimum, or a saddle that was to be kept."""
+        return self.descent.status != "not-converged"
 
 
 def solve(
@@ -41,35 +54,43 @@ def solve(
     extra_starts: Iterable[Start] = (),
     only_starts: Iterable[Start] | None = None,
     settings: Settings | None = None,
+    most_kept: int = MOST_KEPT,
     progress: Callable[[str], None] | None = None,
 ) -> Solution:
     """Lowest state of `material` in its search.phase, from its seeded starts, `extra_starts` and their descents.
 
-    `only_starts` replaces the standard starts. `progress` receives one line of text per finished start.
+    `only_starts` replaces the standard starts. The other distinct minima come along as `others`; `most_kept` ends are
+    refined on the full grid and certified. `progress` receives one line of text per finished start.
     Numerical failure is the status of the result.
     """
     began = time.perf_counter()
     settings = settings or Settings()
-    model = build_model(material)
-    zone = uniform(material.zone.points, material.zone.offset)
-    basis = class_basis(model, material.search.phase)
-    hybridized = material.search.phase == "heavy-fermi-liquid"
-    seeded = starts(model, material.search.starts, material.search.seed, hybridized_only=hybridized)
+    model, phase = build_model(material), material.search.phase
+    seeded = starts(model, material.search.starts, material.search.seed, hybridized_only=CLASSES[phase].hybridized)
     chosen = list(only_starts) if only_starts is not None else [*extra_starts, *seeded]
-    fine = Problem(model, zone, basis)
-    coarse = fine
-    if material.zone.points >= COARSE_FROM:
-        coarse = Problem(model, uniform(2 * (material.zone.points // 4), material.zone.offset), basis)
+    points, offset, basis = material.zone.points, material.zone.offset, class_basis(model, phase)
+    fine = Problem(model, uniform(points, offset), basis)
+    coarse = Problem(model, uniform(2 * (points // 4), offset), basis) if points >= COARSE_FROM else None
     with threadpool_limits(1, user_api="blas"):  # the matrices are small: more threads only wait for each other
-        ends = _descend_all(coarse, chosen, settings, progress)
-        trials = tuple(_trial(model, end) for end in ends)
-        if coarse is not fine:
-            chosen = [Start(end.start.name, end.descent.point.p) for end in _distinct(model, ends)]
-            ends = _descend_all(fine, chosen, settings, None)
-        best = min(ends, key=lambda end: (not _converged(end, settings), end.free_energy))
-        solution = _with_evidence(fine, best, material, settings)
-    evaluations = solution.evaluations + (coarse.matrices if coarse is not fine else 0)
-    return replace(solution, trials=trials, evaluations=evaluations, wall_seconds=time.perf_counter() - began)
+        ends = _descend_all(coarse or fine, chosen, settings, progress)
+        first, *rest = _distinct(ends)
+        kept = [first, *sorted(rest, key=lambda end: end.free_energy)[: most_kept - 1]]
+        if coarse:
+            again = [Start(end.trial.start, end.descent.point.p) for end in kept]
+            refined = zip(_descend_all(fine, again, settings, None), kept, strict=True)
+            kept = [replace(end, found=old.found) for end, old in refined]
+        best, *others = _distinct(kept)
+        states = [_certified(fine, end, material, settings) for end in (best, *others) if end is best or end.settled]
+    lower = _ended_lower(best, others)
+    return replace(
+        states[0],
+        message=states[0].message + ("" if lower is None else _lower_text(states[0], lower)),
+        trials=tuple(end.trial for end in ends),
+        others=tuple(states[1:]),
+        ended_lower=lower,
+        evaluations=sum(state.evaluations for state in states) + fine.matrices + (coarse.matrices if coarse else 0),
+        wall_seconds=time.perf_counter() - began,
+    )
 
 
 def named_start(material: Material, name: str) -> Start:
@@ -88,51 +109,73 @@ def _descend_all(
 ) -> list[_End]:
     ends = []
     for start in begin:
-        fields = start.fields(problem.model)
-        active = problem.model.active
-        fields[active] = problem.model.h[active] + problem.project(fields[active] - problem.model.h[active])
-        end = _End(start, descend(problem, fields, settings))
-        ends.append(end)
+        descent = descend(problem, problem.first_fields(start.p), settings)
+        end = trial(problem.model, start.name, descent.status, descent.point)
+        ends.append(_End(end, descent, len(ends)))
         if progress:
-            energy = end.free_energy / problem.model.cell.size
-            progress(f"start {len(ends)} ({start.name}): {end.descent.status}, F = {energy:.6f} meV per cell")
+            energy = end.free_energy_meV_per_cell
+            progress(f"start {len(ends)} ({start.name}): {end.status}, F = {energy:.6f} meV per cell")
     return ends
 
 
-def _converged(end: _End, settings: Settings) -> bool:
-    return end.descent.status == "minimum" or (settings.keep_saddle and end.descent.status == "saddle")
-
-
-def _distinct(model: MeanFieldModel, ends: list[_End]) -> list[_End]:
-    """Lowest ends that are not the same state, at most MOST_REFINED."""
+def _distinct(ends: list[_End]) -> list[_End]:
+    """One end per state, the settled ones first, each lowest first; an unsettled end near a settled one is dropped."""
     result: list[_End] = []
-    for end in sorted(ends, key=lambda e: e.free_energy):
-        if result and end.free_energy > result[0].free_energy + WINDOW * model.scale:
-            break
-        if not any(_trial(model, end).same_state(_trial(model, other)) for other in result):
+    for end in sorted(ends, key=lambda end: (not end.settled, end.free_energy)):
+        home = next((i for i, other in enumerate(result) if end.trial.same_state(other.trial)), None)
+        if home is None:
             result.append(end)
-    return result[:MOST_REFINED]
+        elif end.settled:  # the first start speaks for the state: F of the others differs by rounding
+            first = min(result[home], end, key=lambda end: end.number)
+            result[home] = replace(first, found=result[home].found + end.found)
+    return result
 
 
-def _trial(model: MeanFieldModel, end: _End) -> Trial:
-    w = end.descent.point.p[model.hybridization]
-    size = float(np.sqrt(w @ w / (16 * model.cell.n_sites)))
-    return Trial(end.start.name, end.descent.status, end.free_energy / model.cell.size, size)
+def _ended_lower(best: _End, others: list[_End]) -> Trial | None:
+    """The lowest end that did not settle but lies below the best that did, with its constraints fulfilled."""
+    bound = best.free_energy - SAME_ENERGY * abs(best.free_energy)
+    lower = [e for e in others if e.free_energy < bound and e.descent.point.constraint_error < FEASIBLE]
+    return min(lower, key=lambda end: end.free_energy).trial if best.settled and lower else None
 
 
-def _with_evidence(problem: Problem, end: _End, material: Material, settings: Settings) -> Solution:
+def _lower_text(solution: Solution, lower: Trial) -> str:
+    gap = solution.free_energy_meV_per_cell - lower.free_energy_meV_per_cell
+    return (
+        f'; not the lowest state: start "{lower.start}" came {gap:.3g} meV lower without converging; '
+        "solve again with more starts or another seed"
+    )
+
+
+def _stability(
+    problem: Problem, point: Point, descent: Descent, settings: Settings
+) -> tuple[Curvature | None, float | None, ZeroModes | None, SoftMode | None]:
+    """Curvature at `point` in the space of all fields, its lowest value over gauge copies, zero modes and soft mode.
+
+    None throughout where they are not known.
+    """
+    full, lowest, softest = descent.curvature, descent.curvature_min, point
+    try:
+        if full is not None and (problem.basis is not None or descent.status == "saddle"):
+            verdict, softest = certify(replace(problem, basis=None), point, settings)
+            full, lowest = verdict.curvature, verdict.curvature_min
+        if full is not None:
+            here = full if softest is point else curvature_at(problem, softest, full_space=True)
+            return full, lowest, zero_modes(problem, point, full), soft_mode(problem, softest, here)
+    except np.linalg.LinAlgError:
+        pass  # what the descent found stands; nothing is known beyond it
+    return None, None, None, None
+
+
+def _certified(problem: Problem, end: _End, material: Material, settings: Settings) -> Solution:
+    """The solution of one end with its evidence, in its class and in the space of all fields."""
     model, descent = problem.model, end.descent
-    point, status, full, zeros = descent.point, descent.status, descent.curvature, None
-    lowest_full = descent.curvature_min
-    if full is not None and problem.basis is not None:
-        everything = replace(problem, basis=None)
-        verdict, _ = certify(everything, point, settings)
-        full, lowest_full = verdict.curvature, verdict.curvature_min
-        status = "minimum-in-class" if status == "minimum" else status
-    if full is not None:
-        zeros = zero_modes(problem, point, full)
+    cells = model.cell.size
+    everything = Problem(model, problem.zone)
     doubled = Problem(model, uniform(2 * problem.zone.points, problem.zone.offset))
-    zone_error = abs(point_at(doubled, point.phi).free_energy - point.free_energy) / model.cell.size
+    point = descent.point if problem.basis is None else point_at(everything, descent.point.phi)
+    full, lowest, zeros, soft = _stability(problem, point, descent, settings)
+    zone_error = abs(point_at(doubled, point.phi).free_energy - point.free_energy) / cells
+    in_class = descent.status == "minimum" and problem.basis is not None
     return Solution(
         model=model,
         zone=problem.zone,
@@ -140,22 +183,27 @@ def _with_evidence(problem: Problem, end: _End, material: Material, settings: Se
         p=point.p,
         correlators=point.state.correlators,
         multipliers=point.multipliers,
-        free_energy_meV_per_cell=point.free_energy / model.cell.size,
-        entropy_kB_per_cell=point.state.entropy / model.cell.size,
-        status=status,
+        free_energy_meV_per_cell=descent.point.free_energy / cells,
+        entropy_kB_per_cell=point.state.entropy / cells,
+        status="minimum-in-class" if in_class else descent.status,
         message=descent.message,
         phase_class=material.search.phase,
-        start=end.start.name,
-        residual_meV=float(np.abs(point.residual).max(initial=0.0)),
+        start=end.trial.start,
+        residual_meV=float(np.abs(descent.point.residual).max(initial=0.0)),
+        residual_full_space_meV=float(np.abs(point.residual).max(initial=0.0)),
         constraint_error=point.constraint_error,
         curvature_min=descent.curvature_min,
-        curvature_full_space=lowest_full,
+        curvature_full_space=lowest,
         curvatures=tuple(float(x) for x in full.eigenvalues[:12]) if full else (),
         zero_modes=zeros,
+        soft_mode=soft,
         zone_error_meV=zone_error,
-        evaluations=problem.matrices + doubled.matrices,
+        evaluations=everything.matrices + doubled.matrices,
         wall_seconds=0.0,
         history=descent.history,
         trials=(),
+        found=end.found,
+        others=(),
+        ended_lower=None,
         inputs=material.to_dict(),
     )

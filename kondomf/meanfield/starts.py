@@ -6,14 +6,17 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from kondomf.meanfield.classical import classical_magnets, moment_channels
 from kondomf.model import MeanFieldModel
 from kondomf.model.lattice import FIRST
-from kondomf.model.majorana import CYCLIC, ELECTRON, SPINON, majorana
+from kondomf.model.majorana import ELECTRON, SPINON, majorana
 
 Array = NDArray[np.float64]
 
 BOND = 0.5249
 """|<i chi0 chi0>| on a bond of the isotropic Kitaev model (Phys. Rev. Lett. 98, 247201 (2007)); 1 for <i chig chig>."""
+ELECTRON_POLARISATION = 0.2
+"""Largest correlator of the electrons of a magnet to start from."""
 COPIES = ("0", "M1", "M2", "M3")
 
 
@@ -69,16 +72,12 @@ def hybridization(model: MeanFieldModel, amplitude: float) -> Array:
     return p
 
 
-def magnet(model: MeanFieldModel, direction: Array, staggered: bool) -> Array:
-    """Spins polarised along `direction` (3,), uniform or alternating, the electrons weakly against them."""
-    p = np.zeros(model.n_channels)
-    for site in range(model.cell.n_sites):
-        sign = -1.0 if staggered and site % 2 else 1.0
-        for species, size in ((SPINON, 1.0), (ELECTRON, -0.2)):
-            for (a, b, c), s in zip(CYCLIC, direction, strict=True):
-                _set(model, p, majorana(site, species, 0), majorana(site, species, a), (0, 0), size * sign * s)
-                _set(model, p, majorana(site, species, b), majorana(site, species, c), (0, 0), -size * sign * s)
-    return p
+def magnet(model: MeanFieldModel, spins: Array) -> Array:
+    """Product state of spins (sites, 3) in units of hbar; electrons weakly polarised by the field that these exert."""
+    p = np.tensordot(moment_channels(model), spins, axes=2)
+    field = np.where((model.species == ELECTRON).all(axis=1), model.v @ p, 0.0)
+    largest = np.abs(field).max(initial=0.0)
+    return np.asarray(p - ELECTRON_POLARISATION * field / largest if largest else p)
 
 
 def noise(model: MeanFieldModel, rng: np.random.Generator, size: float) -> Array:
@@ -89,16 +88,18 @@ def noise(model: MeanFieldModel, rng: np.random.Generator, size: float) -> Array
 
 
 def standard_starts(model: MeanFieldModel) -> dict[str, Start]:
-    """The starts by name: hybridized and decoupled spin liquids of every gauge copy, and magnets."""
-    diagonal, z = np.ones(3) / np.sqrt(3), np.array([0.0, 0.0, 1.0])
-    states = {}
-    for copy, shift in enumerate(COPIES):
-        states[f"decoupled {shift}"] = spin_liquid(model, copy)
-        states[f"hybridized {shift}"] = spin_liquid(model, copy) + hybridization(model, 0.7)
-        if copy == 0:
-            states["antiferromagnet 111"] = magnet(model, diagonal, staggered=True)
-            states["ferromagnet z"] = magnet(model, z, staggered=False)
-    return {name: Start(name, p) for name, p in states.items()}
+    """The starts by name: hybridized and decoupled spin liquids of every gauge copy, and the magnets of the cell.
+
+    The order is that of a search, which may stop early: each kind once, the other copies, the other magnets. Magnets
+    are named by their pattern (`classical.pattern_name`), lowest classical energy first.
+    """
+    magnets = [(name, magnet(model, spins)) for name, spins in classical_magnets(model).items()]
+    liquids = [spin_liquid(model, copy) for copy in range(len(COPIES))]
+    hybridized = hybridization(model, 0.7)
+    copies = [(f"hybridized {shift}", liquid + hybridized) for shift, liquid in zip(COPIES, liquids, strict=True)]
+    decoupled = [(f"decoupled {shift}", liquid) for shift, liquid in zip(COPIES, liquids, strict=True)]
+    order = [decoupled[0], copies[0], *magnets[:1], *copies[1:], *magnets[1:], *decoupled[1:]]
+    return {name: Start(name, p) for name, p in order}
 
 
 def starts(model: MeanFieldModel, count: int, seed: int, *, hybridized_only: bool = False) -> Iterator[Start]:

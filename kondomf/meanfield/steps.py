@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.meanfield.curvature import Curvature, curvature_at
-from kondomf.meanfield.problem import Point, Problem
+from kondomf.meanfield.problem import ROUNDING, Point, Problem
 
 Array = NDArray[np.float64]
 
@@ -83,7 +83,8 @@ class Mixing:
 
 @dataclass(frozen=True)
 class TrustMemory:
-    """Trust radius in the metric of the response (sqrt meV), curvature of the present point, predicted change of F."""
+    """Trust radius in the metric of the response (sqrt meV), curvature of the present point, predicted
+    change of F (0 where rounding hides it)."""
 
     radius: float | None = None
     curvature: Curvature | None = field(default=None, repr=False)
@@ -115,7 +116,8 @@ class TrustRegion:
         gradient = here.coordinates(r)
         y, nu = trust_region_minimum(here.eigenvalues, gradient, radius, self.floor)
         predicted = float(gradient @ y + here.eigenvalues @ y**2 / 2)
-        return here.fields(y, r, nu), TrustMemory(radius, here, predicted)
+        visible = predicted < -ROUNDING * problem.model.scale
+        return here.fields(y, r, nu), TrustMemory(radius, here, predicted if visible else 0.0)
 
     def correct(self, problem: Problem, point: Point, trial: Point, memory: TrustMemory) -> Array | None:
         """Change that takes `trial` back to the floor of a curved valley: a Newton step in the stiff modes alone.
@@ -125,7 +127,7 @@ class TrustRegion:
         stiff modes, excited in second order, would hold the radius down.
         """
         assert memory.curvature is not None
-        if trial.free_energy - point.free_energy < 0.9 * memory.predicted:
+        if not memory.predicted or trial.free_energy - point.free_energy < 0.9 * memory.predicted:
             return None
         eigenvalues = memory.curvature.eigenvalues
         r = trial.residual[problem.model.active]
@@ -142,7 +144,7 @@ class TrustRegion:
     def judge(self, memory: TrustMemory, accepted: bool, change: float) -> TrustMemory:
         """Shrink the radius after a poor prediction, widen it after a good one; a new point needs a new curvature."""
         assert memory.radius is not None
-        quality = change / memory.predicted if memory.predicted < 0 else 1.0
+        quality = change / memory.predicted if memory.predicted else 1.0
         factor = 0.4 if not accepted or quality < 0.25 else (1.6 if quality > 0.8 else 1.0)
         return TrustMemory(memory.radius * factor, None if accepted else memory.curvature)
 

@@ -1,14 +1,20 @@
-"""Accounts for the zero modes of a solution: gauge directions, broken physical generators, or unexplained."""
+"""Modes of the curvature: zero modes accounted for by symmetries, and what a mode does to the state."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from kondomf.meanfield.curvature import Curvature
+from kondomf.meanfield.evaluate import bloch_matrix, thermal_weight
 from kondomf.meanfield.problem import Point, Problem
 from kondomf.model.symmetries import field_matrices, rotated, symmetry_generators
+
+Array = NDArray[np.float64]
+
+ZERO = 1e-6
+"""Curvatures of smaller size are zero modes."""
 
 
 @dataclass(frozen=True)
@@ -24,7 +30,7 @@ class ZeroModes:
         return self.count - self.gauge - self.broken_generators
 
 
-def zero_modes(problem: Problem, point: Point, full: Curvature, tolerance: float = 1e-6) -> ZeroModes:
+def zero_modes(problem: Problem, point: Point, full: Curvature) -> ZeroModes:
     """Count zeros of the full-space curvature and the independent field changes that symmetries make at `point`.
 
     A generator counts when it leaves the model invariant and, at this state, the constrained quantities too; a
@@ -33,8 +39,8 @@ def zero_modes(problem: Problem, point: Point, full: Curvature, tolerance: float
     model = problem.model
     correlators = point.state.correlators
     fields = field_matrices(model, point.phi)
-    gauge: list[NDArray[np.float64]] = []
-    physical: list[NDArray[np.float64]] = []
+    gauge: list[Array] = []
+    physical: list[Array] = []
     for generator in symmetry_generators(model):
         turn = expm(0.7 * generator.x)
         moved = (turn @ correlators @ turn.T)[model.position] - point.p
@@ -43,8 +49,62 @@ def zero_modes(problem: Problem, point: Point, full: Curvature, tolerance: float
             (gauge if generator.gauge else physical).append(change)
     scale = np.sqrt(model.scale) * 1e-5
     n_gauge, n_all = _rank(gauge, scale), _rank(gauge + physical, scale)
-    return ZeroModes(int((np.abs(full.eigenvalues) < tolerance).sum()), n_gauge, n_all - n_gauge)
+    return ZeroModes(int((np.abs(full.eigenvalues) < ZERO).sum()), n_gauge, n_all - n_gauge)
 
 
-def _rank(vectors: list[NDArray[np.float64]], threshold: float) -> int:
+def _rank(vectors: list[Array], threshold: float) -> int:
     return int((np.linalg.svd(np.array(vectors), compute_uv=False) > threshold).sum()) if vectors else 0
+
+
+@dataclass(frozen=True)
+class SoftMode:
+    """The mode of lowest curvature that is no zero mode, in the space of all fields.
+
+    degeneracy : modes of this curvature. change : (NR, n, n) change of the correlators <i gamma_a(0) gamma_b(R)> along
+    the mode, R over model.lattice_vectors, of norm 1.
+    """
+
+    curvature: float
+    degeneracy: int
+    change: Array = field(repr=False)
+
+
+def soft_mode(problem: Problem, point: Point, full: Curvature) -> SoftMode | None:
+    """The lowest mode at `point` that is no zero mode, from its full-space curvature; None if no field has any."""
+    moving = np.flatnonzero(np.abs(full.eigenvalues) > ZERO)
+    if not len(moving) or full.eigenvalues[moving[0]] == 1:
+        return None
+    lowest = full.eigenvalues[moving[0]]
+    degeneracy = int((np.abs(full.eigenvalues - lowest) < ZERO).sum())
+    return SoftMode(float(lowest), degeneracy, correlator_change(problem, point, full, int(moving[0])))
+
+
+def correlator_change(problem: Problem, point: Point, curvature: Curvature, mode: int) -> Array:
+    """Change (NR, n, n) of all correlators along a mode z of the full-space curvature e != 1, of norm 1.
+
+    The fields V R z, with multipliers that hold the constrained quantities, change the correlators of the active
+    channels by (1 - e) R z; what they do to every other correlator belongs to the mode too.
+    """
+    model = problem.model
+    along = np.eye(len(curvature.eigenvalues))[mode]
+    fields = np.zeros(model.n_channels)
+    fields[model.active] = curvature.fields(along, np.zeros(len(model.active)), 0.0)
+    change = _responding(problem, point, fields / (1 - curvature.eigenvalues[mode]))
+    return np.asarray(change / np.linalg.norm(change))
+
+
+def _responding(problem: Problem, point: Point, fields: Array) -> Array:
+    """Response (NR, n, n) of all correlators to a small change of the fields (N,).
+
+    d tanh(h/2T) = U (X o U+ dh U) U+ with the X of the response matrix.
+    """
+    model = problem.model
+    n = model.n_majorana
+    total = np.zeros((len(model.lattice_vectors), n * n))
+    for part, e, u in point.state.chunks:
+        phases = np.exp(2j * np.pi * (problem.zone.k[part] @ model.lattice_vectors.T))
+        adjoint = u.conj().swapaxes(1, 2)
+        inner = thermal_weight(e, model.temperature) * (adjoint @ bloch_matrix(model, fields, phases) @ u)
+        weighted = phases.conj() * problem.zone.weight[part, None]
+        total -= (weighted.T @ (u @ inner @ adjoint).reshape(-1, n * n)).imag
+    return total.reshape(-1, n, n)

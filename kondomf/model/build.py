@@ -82,12 +82,16 @@ def _add_exchange(terms: Terms, cell: MagneticCell, material: Material) -> None:
 
 
 def _add_kondo(terms: Terms, cell: MagneticCell, material: Material) -> None:
+    """J_K S_i.s_i on every site and J_1 (S_i.s_j + S_j.s_i) on every first-neighbour bond, anisotropic alike."""
+    sites = range(cell.n_sites)
+    pairs = [(material.kondo.coupling_meV, (i, SPINON, HERE), (i, ELECTRON, HERE)) for i in sites]
+    for i, j, r, _ in cell.bonds(FIRST):
+        pairs.append((material.kondo.neighbour_coupling_meV, (i, SPINON, HERE), (j, ELECTRON, r)))
+        pairs.append((material.kondo.neighbour_coupling_meV, (j, SPINON, r), (i, ELECTRON, HERE)))
     big, small = spin(material.mean_field.kondo_form), spin("so4")
-    for site in range(cell.n_sites):
+    for coupling, at, to in pairs:
         for alpha, factor in enumerate(material.kondo.anisotropy):
-            value = material.kondo.coupling_meV * factor
-            at, to = (site, SPINON, HERE), (site, ELECTRON, HERE)
-            _add_spin_product(terms, value, big[alpha], at, small[alpha], to)
+            _add_spin_product(terms, coupling * factor, big[alpha], at, small[alpha], to)
 
 
 def _add_zeeman(terms: Terms, cell: MagneticCell, material: Material) -> None:

@@ -30,6 +30,9 @@ SECOND = tuple(Bond(s, s, cell, kind) for s in (A, B) for cell, kind in (((0, 1)
 # Across the hexagon, opposite to the first-neighbour bond of the same type.
 THIRD = (Bond(A, B, (1, -1), X), Bond(A, B, (-1, 1), Y), Bond(A, B, (-1, -1), Z))
 
+M_POINTS = ((0, 0), (1, 0), (0, 1), (1, 1))
+"""0, M1, M2, M3 in units of half reciprocal vectors: such a wave has the sign (-1)^(m.r) in the primitive cell r."""
+
 NORMAL = np.ones(3) / np.sqrt(3.0)
 """Normal of the layer in spin axes (the cubic axes of the edge-shared octahedra)."""
 BOND_DIRECTION = np.array([[0.0, 1.0, -1.0], [-1.0, 0.0, 1.0], [1.0, -1.0, 0.0]]) / np.sqrt(2.0)
@@ -79,6 +82,20 @@ class MagneticCell:
         n1 = (i * d - j * c) // determinant
         n2 = (j * a - i * b) // determinant
         return (i - n1 * a - n2 * c, j - n1 * b - n2 * d), (n1, n2)
+
+    @property
+    def is_threefold(self) -> bool:
+        """True if a rotation by 120 degrees, a1 -> a2 - a1, a2 -> -a1, maps the magnetic lattice on itself."""
+        turned = np.asarray(self.matrix) @ [[-1, 1], [-1, 0]]
+        return all(self._reduce((int(i), int(j)))[0] == (0, 0) for i, j in turned)
+
+    def holds(self, m: tuple[int, int]) -> bool:
+        """True if the signs (-1)^(m.r) repeat with this cell."""
+        return not (np.asarray(self.matrix) @ m % 2).any()
+
+    def signs(self, m: tuple[int, int]) -> NDArray[np.float64]:
+        """Sign (-1)^(m.r) of the primitive cell r of every site, (sites,)."""
+        return np.repeat((-1.0) ** (np.asarray(self.offsets) @ m), 2)
 
     def locate(self, cell: tuple[int, int], sublattice: int) -> tuple[int, tuple[int, int]]:
         """Site number and magnetic lattice vector R of a site given by its primitive cell."""

@@ -6,7 +6,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.model.lattice import MagneticCell
+from kondomf.model.lattice import M_POINTS, MagneticCell
 from kondomf.model.majorana import PER_SITE
 from kondomf.model.terms import canonical
 
@@ -86,8 +86,7 @@ class MeanFieldModel:
     def gauge_signs(self) -> Array:
         """Signs (4, N) that turn a decoupled state into its gauge copies: spinon momentum shifted by 0, M1, M2, M3.
 
-        A spinon bilinear between primitive cells r and r' gets (-1)^(m.(r' - r)). Copies that a magnetic cell
-        makes equal to each other are kept; they are the same state.
+        A spinon bilinear between primitive cells r and r' gets (-1)^(m.(r' - r)).
         """
         signs = np.ones((4, self.n_channels))
         spinons = np.flatnonzero((self.species == 0).all(axis=1))
@@ -95,8 +94,22 @@ class MeanFieldModel:
             a, b, r1, r2 = (int(x) for x in self.table[p])
             start = self.cell.primitive_cell(a // PER_SITE, np.zeros(2, int))
             shift = self.cell.primitive_cell(b // PER_SITE, np.array([r1, r2])) - start
-            signs[:, p] = [1 - 2 * ((m1 * shift[0] + m2 * shift[1]) % 2) for m1, m2 in ((0, 0), (1, 0), (0, 1), (1, 1))]
+            signs[:, p] = [1 - 2 * ((m1 * shift[0] + m2 * shift[1]) % 2) for m1, m2 in M_POINTS]
         return signs
+
+    @cached_property
+    def distinct_copies(self) -> tuple[int, ...]:
+        """Rows of `gauge_signs` that no gauge transformation of this cell turns into each other, the first being 0.
+
+        Where the signs (-1)^(m.r) of the sites repeat with the cell, they are such a transformation: a decoupled state
+        and its copy then have the same curvatures, each seeing the hybridizations that the other sees, times the signs.
+        """
+        chosen: list[int] = []
+        for copy, m in enumerate(M_POINTS):
+            shifts = [(m[0] - M_POINTS[other][0], m[1] - M_POINTS[other][1]) for other in chosen]
+            if not any(self.cell.holds(shift) for shift in shifts):
+                chosen.append(copy)
+        return tuple(chosen)
 
     def find(self, a: int, b: int, r: tuple[int, int]) -> tuple[int, int] | None:
         """Number and sign of the channel i gamma_a(0) gamma_b(R), or None if the model does not hold it."""

@@ -6,6 +6,7 @@ import numpy as np
 
 from kondomf.material import Material, material_from_dict
 from kondomf.meanfield import Solution
+from kondomf.meanfield.classical import pattern_name
 from kondomf.phases.order import Order
 from kondomf.phases.spectrum import Gap
 
@@ -27,6 +28,7 @@ of it."""
 NO_NEMATICITY = 1e-3
 
 FRACTIONALIZED = "Kitaev spin liquid with metal (FL*)"
+VALENCE_BONDS = "valence-bond crystal with metal"
 MELTED = "disordered local moments with metal"
 HEAVY = "heavy Fermi liquid"
 INSULATOR = "Kondo insulator"
@@ -61,22 +63,34 @@ def label(solution: Solution, order: Order, gap: Gap) -> Label:
     """Name the phase of a solution. Unconverged solutions are "undetermined"."""
     if solution.status == "not-converged":
         return Label(UNDETERMINED, (f"not converged: largest residual {solution.residual_meV:.2g} meV",))
-    if order.hybridization.max() < NO_HYBRIDIZATION:
-        return _decoupled(order, gap, solution.model.temperature)
+    if order.largest_hybridization < NO_HYBRIDIZATION:
+        return _decoupled(solution, order, gap)
     return _hybridized(solution, order, gap)
 
 
-def _decoupled(order: Order, gap: Gap, temperature: float) -> Label:
+def _decoupled(solution: Solution, order: Order, gap: Gap) -> Label:
     moment = float(np.linalg.norm(order.spin_moment, axis=1).max())
     evidence = (
-        f"no hybridization (largest {order.hybridization.max():.1g})",
+        f"no hybridization (largest {order.largest_hybridization:.1g})",
         f"moments: spins {moment:.3g}, electrons {np.linalg.norm(order.electron_moment, axis=1).max():.3g}",
+        f"bond correlators of the spinons {order.spinon_bonds.min():.3g} to {order.spinon_bond:.3g}",
         f"smallest excitation of the spinons {gap.spinons:.3g} meV, of the electrons {gap.electrons:.3g} meV",
     )
     if moment > NO_MOMENT:
-        return Label(f"{_magnet(order)} with {'metal' if gap.electrons < temperature else 'insulator'}", evidence)
-    bonds = f"largest bond correlator of the spinons {order.spinon_bond:.3g}"
-    return Label(FRACTIONALIZED if order.spinon_bond > NO_BOND else MELTED, (evidence[0], bonds, *evidence[1:]))
+        metal = gap.electrons < solution.model.temperature
+        return Label(f"{_magnet(order)} with {'metal' if metal else 'insulator'}", evidence)
+    return Label(_without_moments(solution, order), evidence)
+
+
+def _without_moments(solution: Solution, order: Order) -> str:
+    """Spinons that hop are a liquid; where like bonds end up unlike, it is nematic, or cut into pieces altogether."""
+    material = material_from_dict(solution.inputs)
+    if order.spinon_bond < NO_BOND:
+        return MELTED
+    if order.spinon_bonds.min() < NO_BOND and _alike(material):
+        return VALENCE_BONDS
+    nematic = order.nematicity > NO_NEMATICITY and _isotropic(solution, material)
+    return f"nematic {FRACTIONALIZED}" if nematic else FRACTIONALIZED
 
 
 def _hybridized(solution: Solution, order: Order, gap: Gap) -> Label:
@@ -92,31 +106,30 @@ def _hybridized(solution: Solution, order: Order, gap: Gap) -> Label:
     if paired:
         name = ("triplet" if order.pairing[1] > order.pairing[0] else "singlet") + " superconductor"
     evidence = [
-        f"largest hybridization {order.hybridization.max():.3g}",
+        f"largest hybridization {order.largest_hybridization:.3g}",
         f"pairing over normal amplitude {ratio:.2g}, of which the spin forms explain up to {allowed.pairing:.2g}",
         f"smallest excitation {gap.total:.3g} meV, {gap.total / material.temperature_meV:.2g} k_BT",
         f"spin moment {moment:.2g}, of which the spin forms explain up to {allowed.moment:.2g}",
     ]
     if moment > allowed.moment and material.mean_field.magnetic_channel:
         name = f"{_magnet(order)} and {name}"
-    elif order.nematicity > NO_NEMATICITY and _isotropic(material):
+    elif order.nematicity > NO_NEMATICITY and _isotropic(solution, material):
         name = f"nematic {name}"
         evidence.append(f"bond energies differ by {order.nematicity:.2g} of their sum")
     return Label(name, tuple(evidence))
 
 
 def _magnet(order: Order) -> str:
-    """Name of the magnetic order: compares the summed moment with the sum of sizes, and sublattices with each other."""
-    moments = order.spin_moment
-    total = np.linalg.norm(moments.sum(axis=0))
-    size = np.linalg.norm(moments, axis=1).sum()
-    staggered = np.linalg.norm((moments * (-1.0) ** np.arange(len(moments))[:, None]).sum(axis=0))
-    if total > 0.9 * size:
-        return "ferromagnet"
-    return "Néel antiferromagnet" if staggered > 0.9 * size else "canted magnet"
+    """Name of the magnetic order, as that of a start, but with the accent of Néel."""
+    return pattern_name(order.solution.model.cell, order.spin_moment).replace("Neel", "Néel")
 
 
-def _isotropic(material: Material) -> bool:
-    """True when neither the material nor its grid tells the bonds apart."""
+def _alike(material: Material) -> bool:
+    """True when the couplings do not tell the bonds apart."""
     same = len(set(material.spin_layer.kitaev_meV)) == len(set(material.kondo.anisotropy)) == 1
-    return same and material.zone.offset == "c3" and not any(material.magnetic_field.tesla)
+    return same and not any(material.magnetic_field.tesla)
+
+
+def _isotropic(solution: Solution, material: Material) -> bool:
+    """True when neither the couplings nor the cell and its grid tell the bonds apart."""
+    return _alike(material) and material.zone.offset == "c3" and solution.model.cell.is_threefold

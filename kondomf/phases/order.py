@@ -2,12 +2,13 @@
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.material import material_from_dict
-from kondomf.meanfield import Solution
+from kondomf.model import MeanFieldModel
 from kondomf.model.build import exchange_matrix
 from kondomf.model.lattice import FIRST
 from kondomf.model.majorana import ELECTRON, SPINON, majorana, spin, spinor
@@ -20,18 +21,31 @@ TRIPLET = np.array([[[-1, 0], [0, 1]], [[1j, 0], [0, 1j]], [[0, 1], [1, 0]]])
 """sigma_a i sigma_y for a = x, y, z."""
 
 
+class State(Protocol):
+    """What order parameters are read from: a solution, or a state on a branch."""
+
+    @property
+    def model(self) -> MeanFieldModel: ...
+    @property
+    def correlators(self) -> Array: ...
+    @property
+    def inputs(self) -> dict[str, Any]: ...
+
+
 @dataclass(frozen=True)
 class Order:
-    """Order parameters of one solution; every property is computed when asked for."""
+    """Order parameters of one state; every property is computed when asked for."""
 
-    solution: Solution
+    solution: State
 
     def block(self, one: tuple[int, int], other: tuple[int, int], r: tuple[int, int] = HERE) -> Array:
         """<i gamma^mu gamma^nu> between (site, species) at 0 and (site, species) at R, shape (4, 4)."""
-        model = self.solution.model
-        index = int(np.flatnonzero((model.lattice_vectors == r).all(axis=1))[0])
-        a, b = majorana(*one, 0), majorana(*other, 0)
-        return self.solution.correlators[index, a : a + 4, b : b + 4]
+        vectors = self.solution.model.lattice_vectors
+        at, back = (np.flatnonzero((vectors == sign * np.array(r)).all(axis=1)) for sign in (1, -1))
+        a, b = (slice(first, first + 4) for first in (majorana(*one, 0), majorana(*other, 0)))
+        if len(at):
+            return self.solution.correlators[at[0], a, b]
+        return -self.solution.correlators[back[0], b, a].T  # the model may hold a bond from its other end only
 
     @property
     def sites(self) -> range:
@@ -41,6 +55,21 @@ class Order:
     def hybridization(self) -> Array:
         """Singular values of W = <i chi^mu eta^nu> of every site, descending, shape (sites, 4), between 0 and 1."""
         return np.array([np.linalg.svd(self.block((i, SPINON), (i, ELECTRON)), compute_uv=False) for i in self.sites])
+
+    @cached_property
+    def bond_hybridization(self) -> float:
+        """Largest singular value of <i chi^mu eta^nu> between a spin and the electrons of a first neighbour."""
+        ends = [
+            end
+            for i, j, r, _ in self.bonds
+            for end in (((i, SPINON), (j, ELECTRON), r), ((i, ELECTRON), (j, SPINON), r))
+        ]
+        return float(max(np.linalg.norm(self.block(*end), 2) for end in ends))
+
+    @property
+    def largest_hybridization(self) -> float:
+        """Largest singular value of the hybridization on sites and first-neighbour bonds: zero means decoupled."""
+        return max(float(self.hybridization.max()), self.bond_hybridization)
 
     @cached_property
     def spin_moment(self) -> Array:
@@ -93,10 +122,14 @@ class Order:
         return float(total)
 
     @cached_property
+    def spinon_bonds(self) -> Array:
+        """Largest |<i chi^mu chi^nu>| of every first-neighbour bond, (bonds,)."""
+        return np.array([np.abs(self.block((i, SPINON), (j, SPINON), r)).max() for i, j, r, _ in self.bonds])
+
+    @property
     def spinon_bond(self) -> float:
-        """Largest |<i chi^mu chi^nu>| on a first-neighbour bond."""
-        blocks = [self.block((i, SPINON), (j, SPINON), r) for i, j, r, _ in self.bonds]
-        return float(np.abs(blocks).max())
+        """The largest of `spinon_bonds`."""
+        return float(self.spinon_bonds.max())
 
     @cached_property
     def pairing(self) -> tuple[float, float]:
@@ -104,11 +137,14 @@ class Order:
         pairs = [(i, i, HERE) for i in self.sites] + [(i, j, r) for i, j, r, _ in self.bonds]
         singlet = triplet = 0.0
         for i, j, r in pairs:
-            amplitude = self._electron_pairs(i, j, r)
-            singlet = max(singlet, float(abs(np.sum(SINGLET * amplitude)) / 2))
-            d = [np.sum(t.conj() * amplitude) / 2 for t in TRIPLET]
-            triplet = max(triplet, float(np.linalg.norm(d)))
+            psi, d = self.pair_amplitudes(i, j, r)
+            singlet, triplet = max(singlet, abs(psi)), max(triplet, float(np.linalg.norm(d)))
         return singlet, triplet
+
+    def pair_amplitudes(self, i: int, j: int, r: tuple[int, int]) -> tuple[complex, NDArray]:
+        """psi and d (3,) of <c_i c_j> = (psi + d.sigma) i sigma_y between two sites."""
+        amplitude = self._electron_pairs(i, j, r)
+        return complex(np.sum(SINGLET * amplitude) / 2), np.array([np.sum(t.conj() * amplitude) / 2 for t in TRIPLET])
 
     def _electron_pairs(self, i: int, j: int, r: tuple[int, int]) -> NDArray:
         """<c_i sigma c_j sigma'>, (2, 2); <eta eta> = delta - i <i eta eta>, and the delta drops out of <c c>."""

@@ -8,6 +8,8 @@ LIMITS = (
     "space, couplings are mean-field couplings, and transition temperatures are crossovers in reality."
 )
 """Stated wherever a result is shown."""
+COARSE = 0.1
+"""Relative change of a response on a doubled grid that is worth a word."""
 
 
 def align(rows: Sequence[tuple[str, str]]) -> str:
@@ -38,17 +40,54 @@ def solution_table(summary: dict[str, Any]) -> str:
     ]
     if summary["curvature_min"] is not None:
         rows.append(("lowest curvature", _fixed(summary["curvature_min"], 6)))
-    if summary["phase_class"] != "any" and summary["curvature_full_space"] is not None:
-        rows.append(("outside the class", f"lowest curvature {_fixed(summary['curvature_full_space'], 6)}"))
+    rows += _stability(summary)
     if zero is not None:
         text = f"{zero['count']}: {zero['broken_generators']} broken generators, {zero['gauge_directions']} gauge"
         rows.append(("zero modes", text + (f", {zero['unexplained']} unexplained" if zero["unexplained"] else "")))
+    if "thermodynamics" in summary:
+        rows += _responses(summary["thermodynamics"])
     rows += [
         ("starts", _search(summary)),
         ("shown", f'from start "{summary["start"]}"'),
         ("evaluations", f"{summary['evaluations']} matrices"),
     ]
     return align(rows)
+
+
+def _stability(summary: dict[str, Any]) -> list[tuple[str, str]]:
+    """What a chosen phase became, and whether and towards what the state is unstable in the space of all fields."""
+    rows = [("collapsed", summary["collapsed"])] if summary["collapsed"] else []
+    lowest, in_class = summary["curvature_full_space"], summary["phase_class"] != "any"
+    if lowest is None:
+        return rows
+    text = f"unstable towards {summary['instability']}" if summary["instability"] else "stable"
+    text += f" (lowest curvature {_fixed(lowest, 6)})"
+    if in_class and summary["residual_full_space_meV"] > max(1e3 * summary["residual_meV"], 1e-6):
+        text += f"; fields that the class leaves out are driven by up to {summary['residual_full_space_meV']:.2g} meV"
+    if in_class:
+        rows.append(("outside the class", text))
+    elif summary["instability"]:
+        rows.append(("instability", text))
+    return rows
+
+
+def _responses(thermodynamics: dict[str, Any]) -> list[tuple[str, str]]:
+    """Specific heat, spin susceptibility and compressibility with what is to be said of them."""
+    parts = (
+        ("specific heat", "specific_heat_kB_per_cell", "k_B per cell"),
+        ("spin susceptibility", "spin_susceptibility_muB_per_tesla_per_cell", "mu_B/T per cell, along x y z"),
+        ("compressibility", "compressibility_per_meV", "per meV and conduction site"),
+    )
+    rows = []
+    for name, key, unit in parts:
+        value, remark = thermodynamics[key], thermodynamics["remarks"].get(key)
+        error = thermodynamics["zone_errors"].get(key, 0.0)
+        if isinstance(value, list):
+            value = " ".join("inf" if row[i] is None else f"{row[i]:.4g}" for i, row in enumerate(value))
+        text = "none" if value is None else f"{value if isinstance(value, str) else format(value, '.5g')} {unit}"
+        text += f"; changes by {error:.0%} on a doubled grid" if error > COARSE else ""
+        rows.append((name, text + (f"; {remark}" if remark else "")))
+    return rows
 
 
 def _search(summary: dict[str, Any]) -> str:
@@ -62,7 +101,10 @@ def _search(summary: dict[str, Any]) -> str:
     which = f"the lowest of {len(minima)} minima" if len(minima) > 1 else "the only minimum met"
     text = f"{minima[0]['found']} of {starts} ended at {which}"
     text += f" (others at {others} meV)" if others else ""
-    return f"{text}; chance that one more meets a new one about {summary['chance_of_another_minimum']:.0%}"
+    chance, bound = summary["chance_of_another_minimum"], summary["chance_not_excluded"]
+    if chance:
+        return f"{text}; chance that one more meets a new one about {chance:.0%}"
+    return f"{text}; chance that one more meets a new one below {bound:.0%} (95% confidence)"
 
 
 def _numbers(values: Sequence[float]) -> str:

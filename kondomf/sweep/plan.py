@@ -15,9 +15,10 @@ import numpy as np
 
 from kondomf.errors import InputError
 from kondomf.material import Material, load_material, material_from_dict, with_value
+from kondomf.material.schema import NEEDS_SO4
 from kondomf.sweep.record import Axis, PointKey
 
-PHASES = ("any", "decoupled", "heavy-fermi-liquid", "magnetic")
+PHASES = ("any", "decoupled", "paramagnetic", "heavy-fermi-liquid", "magnetic")
 """Classes inside which a point can be minimised."""
 
 Index = tuple[int, ...]
@@ -212,7 +213,7 @@ def _validate_points(path: Path, plan: SweepPlan) -> None:
 def _for_phase(material: Material, phase: str) -> Material:
     data = material.to_dict()
     data["search"] = {**data.get("search", {}), "phase": phase}
-    if phase == "heavy-fermi-liquid":
+    if phase in NEEDS_SO4:
         data["mean_field"] = {**data["mean_field"], "exchange_form": "so4", "kondo_form": "so4"}
     return material_from_dict(data, where=material.name)
 

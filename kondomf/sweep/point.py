@@ -26,8 +26,13 @@ NUMBERS = (
     "evaluations",
     "start",
     "phase",
+    "minima_met",
+    "instability",
+    "collapsed",
 )
 """Entries of the summary that are kept as they are."""
+MOST_KEPT = 3
+"""Minima of a point that are refined; a map shows the lowest."""
 
 
 def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[Any]] | None) -> PointResult:
@@ -40,7 +45,7 @@ def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[A
     neighbour = []
     if parent is not None:
         neighbour = [carried_over(build_model(point), "neighbour", parent["channels"], parent["p"])]
-    solution = solve(point, extra_starts=neighbour)
+    solution = solve(point, extra_starts=neighbour, most_kept=MOST_KEPT)
     summary = summarize(solution)
     hybridization = np.array(summary["hybridization_singular_values"])
     spins, electrons = np.array(summary["spin_moment"]), np.array(summary["electron_moment"])
@@ -53,7 +58,6 @@ def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[A
         "zero_modes": (summary["zero_modes"] or {}).get("count"),
         "unexplained_zero_modes": (summary["zero_modes"] or {}).get("unexplained"),
         "starts_at_lowest": summary["minima"][0]["found"] if summary["minima"] else 0,
-        "minima": len(summary["minima"]),
         "chance_of_another_minimum": summary["chance_of_another_minimum"],
         "phase_evidence": "; ".join(summary["phase_evidence"]),
     }
