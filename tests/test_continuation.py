@@ -6,8 +6,8 @@ from materials import T, dimensionless
 from scipy.integrate import quad
 from scipy.optimize import brentq
 
-from kondomf.material.honeycomb import density_of_states
 from kondomf.errors import InputError
+from kondomf.material.honeycomb import density_of_states
 from kondomf.meanfield import named_start
 from kondomf.meanfield.branches import follow_branches
 from kondomf.meanfield.continuation import CONTINUOUS, LIMIT, SPINODAL, Family, Follower
@@ -18,7 +18,7 @@ KONDO, TEMPERATURE = "kondo.coupling_meV", "mean_field.temperature_meV"
 
 
 def followed(start, key, at, to, precision=0.05, copies=True, **keys):
-    """Points and end of the branch that the standard start leads to at `at`, followed to `to`; energies in units of t."""
+    """Points and end of the branch that the start leads to at `at`, followed to `to`; energies in units of t."""
     family = Family(dimensionless(**keys), key, T * min(at, to), T * max(at, to))
     follower = Follower(family, precision, copies)
     problem = family.at(T * at)

@@ -103,7 +103,7 @@ def follow_branches(
             branch = _branch(follower, found, x, start)
             if branch is not None:
                 found.append(branch)
-                say(f"branch {len(found)}: {_text(branch)}")
+                say(f"a branch of {_text(branch)}")
                 seeds.extend(end.beyond for end in branch.ends if end.beyond)
         found.sort(key=lambda branch: branch.range)
         transitions = sorted((*_crossings(follower, found), *_continuous(follower, found)), key=lambda t: t.x)
@@ -198,4 +198,4 @@ def _energy(follower: Follower, branch: Branch, x: float) -> float:
 
 def _text(branch: Branch) -> str:
     low, high = branch.ends
-    return f"{len(branch.points)} points from {low.x:g} ({low.kind}) to {high.x:g} ({high.kind})"
+    return f"{len(branch.points)} states from {low.x:g} ({low.kind}) to {high.x:g} ({high.kind})"

@@ -107,7 +107,7 @@ def named_start(material: Material, name: str) -> Start:
 def _descend_all(
     problem: Problem, begin: Iterable[Start], settings: Settings, progress: Callable[[str], None] | None
 ) -> list[_End]:
-    ends = []
+    ends: list[_End] = []
     for start in begin:
         descent = descend(problem, problem.first_fields(start.p), settings)
         end = trial(problem.model, start.name, descent.status, descent.point)

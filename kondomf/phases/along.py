@@ -53,14 +53,16 @@ class Along:
     def rows(self) -> list[tuple[str, str]]:
         """The short table: every branch with its ends, and the transitions between lowest branches."""
         result = [("along", f"{self.key} from {self.diagram.family.low:g} to {self.diagram.family.high:g}")]
-        for one in self.branches:
-            low, high = one.branch.ends
+        for named in self.branches:
+            low, high = named.branch.ends
             span = f"from {low.x:.7g} ({low.kind}) to {high.x:.7g} ({high.kind})"
-            result.append((f"branch {one.number}", f"{one.phase}, {span}"))
-        for transition in self.diagram.transitions:
-            who = " and ".join(str(i + 1) for i in transition.branches)
-            what = "transition" if transition.lowest else "metastable"
-            result.append((what, f"{transition.kind} at {transition.x:.7g}, branch {who}"))
+            result.append((f"branch {named.number}", f"{named.phase}, {span}"))
+        lowest = [transition for transition in self.diagram.transitions if transition.lowest]
+        for one in lowest:
+            who = " and ".join(str(i + 1) for i in one.branches)
+            result.append(("transition", f"{one.kind} at {one.x:.7g}, branch {who}"))
+        if higher := len(self.diagram.transitions) - len(lowest):
+            result.append(("", f"{higher} more between states that are not the lowest: see the JSON"))
         result.append(("precision", f"{self.diagram.precision:.2g}"))
         return result
 

@@ -37,7 +37,7 @@ def draw_branches(figure: "Figure", found: Along) -> None:
             _mark(axes, one, one.table[name][[0, -1]], color)
     for axes, (_, text) in zip(rest, PANELS, strict=True):
         axes.set_ylabel(text)
-        axes.set_ylim(bottom=0)
+        axes.set_ylim(bottom=-0.03 * axes.get_ylim()[1])
     top.set_ylabel("F above the lowest\n(meV per cell)")
     for transition in found.diagram.transitions:
         if transition.lowest:
@@ -47,6 +47,7 @@ def draw_branches(figure: "Figure", found: Along) -> None:
                 f"{transition.x:.5g}", (transition.x, 1.0), xycoords=("data", "axes fraction"), fontsize=8, ha="center"
             )
     rest[-1].set_xlabel(found.key)
+    figure.suptitle("circles: spinodals; diamonds: continuous ends; grey: transitions of the lowest state", fontsize=8)
     figure.legend(loc="outside lower center", fontsize=8, frameon=False, ncols=2)
 
 
