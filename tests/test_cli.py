@@ -227,6 +227,7 @@ def test_an_interrupted_solve_ends_with_exit_code_130_and_leaves_nothing(tmp_pat
         (["solve", "material.toml", "--keep-saddle"], "--keep-saddle studies one start: name it with --start"),
         (["solve", "material.toml", "--along", "kondo"], "--along 'kondo': give KEY=FROM:TO like kondo.coupling_meV="),
         (["solve", "material.toml", "--along", "kondo.coupling_meV=2:1"], "give FROM below TO"),
+        (["solve", "material.toml", "--along", "kondo.coupling_meV=1:2", "--precision", "0"], "precision 0 of kondo"),
         (["solve", "material.toml", "--along", "zone.points=2:4"], "zone.points is no coupling"),
         (["solve", "material.toml", "--along", "kondo.j=1:2"], "kondo.j is no numeric key of a material"),
         (["solve", "material.toml", "--along", "conduction_layer.filling=1:3"], "filling"),

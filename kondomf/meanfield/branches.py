@@ -63,12 +63,16 @@ class Transition:
 
 @dataclass(frozen=True)
 class Diagram:
-    """Branches of `family` and their transitions, in the order of x; precision in the unit of its parameter."""
+    """Branches of `family` and their transitions, in the order of x.
+
+    precision : in the unit of the parameter. complete : False where the number of branches was cut at MOST_BRANCHES.
+    """
 
     family: Family
     precision: float
     branches: tuple[Branch, ...]
     transitions: tuple[Transition, ...]
+    complete: bool
 
 
 def follow_branches(
@@ -92,7 +96,9 @@ def follow_branches(
     family = Family(material, key, low, high)
     for x in (low, high):
         family.material_at(x)
-    precision = precision or PRECISION * (high - low)
+    precision = PRECISION * (high - low) if precision is None else precision
+    if not 0 < precision < high - low:
+        raise InputError(f"precision {precision:g} of {key}: give a number above 0 and below the range")
     follower = Follower(family, precision)
     say = progress or (lambda text: None)
     found: list[Branch] = []
@@ -107,7 +113,7 @@ def follow_branches(
                 seeds.extend(end.beyond for end in branch.ends if end.beyond)
         found.sort(key=lambda branch: branch.range)
         transitions = sorted((*_crossings(follower, found), *_continuous(follower, found)), key=lambda t: t.x)
-    return Diagram(family, precision, tuple(found), tuple(transitions))
+    return Diagram(family, precision, tuple(found), tuple(transitions), complete=not seeds)
 
 
 def _searched(family: Family, say: Callable[[str], None]) -> Iterator[tuple[float, Start]]:
@@ -169,6 +175,8 @@ def _crossings(follower: Follower, branches: list[Branch]) -> Iterator[Transitio
             x = float(brentq(difference, left, right, xtol=follower.precision))
             energies = [_energy(follower, branch, x) for branch in branches]
             own = min(energies[i], energies[j])
+            if not np.isfinite(own):  # neither branch was found again there
+                continue
             yield Transition(x, "first order", own, (i, j), own <= min(energies) + SAME_F * abs(own))
 
 

@@ -236,6 +236,12 @@ class Follower:
         With y the change of the correlators along the modes, P' = P + B du + R y and diag(H) y + f du = -R^T r, where
         B and f (per unit of u) are the derivatives at fixed active fields, the multipliers solved.
         """
+        try:
+            return self._newton(here, plane)
+        except np.linalg.LinAlgError:
+            return None
+
+    def _newton(self, here: BranchPoint, plane: _Plane) -> _Found | None:
         family, x, problem, point = self.family, here.x, here.problem, here.point
         for steps in range(NEWTON_STEPS):
             p, u = _correlators(problem, point), x / family.span
@@ -317,12 +323,12 @@ class Follower:
             return float(np.abs(sizes(last.model, p) - sizes(last.model, last.point.p)).max())
 
         jumps, beyond = [], None
-        for x in (end + distance, end + distance / 4):
-            problem, point = family.move(last.point, float(np.clip(x, family.low, family.high)))
+        for x in np.clip([end + distance, end + distance / 4], family.low, family.high):
+            problem, point = family.move(last.point, float(x))
             down = descend(problem, point.phi, self.settings)
             if down.status != "minimum":
                 return End(end, SPINODAL, last)
-            beyond = beyond or (x, Start("beyond", down.point.p))
+            beyond = beyond or (float(x), Start("beyond", down.point.p))
             jumps.append(change(down.point.p))
         before = self.at(here, end - distance)
         past = 0.0 if before is None else change(before.point.p)

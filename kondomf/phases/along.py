@@ -63,6 +63,8 @@ class Along:
             result.append(("transition", f"{one.kind} at {one.x:.7g}, branch {who}"))
         if higher := len(self.diagram.transitions) - len(lowest):
             result.append(("", f"{higher} more between states that are not the lowest: see the JSON"))
+        if not self.diagram.complete:
+            result.append(("incomplete", "there are more branches than were followed: narrow the range"))
         result.append(("precision", f"{self.diagram.precision:.2g}"))
         return result
 
@@ -74,6 +76,7 @@ class Along:
             "from": family.low,
             "to": family.high,
             "precision": self.diagram.precision,
+            "complete": self.diagram.complete,
             "branches": [
                 {
                     "branch": one.number,
