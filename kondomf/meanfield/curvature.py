@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 from scipy.linalg import eigh
 
 from kondomf.meanfield.evaluate import response
-from kondomf.meanfield.problem import Point, Problem, point_at
+from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, ROUNDING, Point, Problem, point_at, stiffness
 
 Array = NDArray[np.float64]
 
@@ -18,6 +18,14 @@ SAME_FIELDS = 1e-12
 """Fields that differ by less, in units of the largest coupling, are the same."""
 FROZEN = 1e-6
 """A constrained quantity that responds by less than this fraction (of a root of the response) needs no projection."""
+FIRM = 1e-2
+"""The multiplier of a constrained quantity that responds by less than this fraction is not predicted in first order."""
+ZERO = 1e-9
+"""Curvatures down to minus this are not negative."""
+FREE = 1e-6
+"""Constrained quantities that respond by less than this, per largest coupling, leave their multiplier free."""
+MOST_SUPPORTS, DISPLACED, OVERSHOT, FARTHEST = 3, 1e-3, 1.5, 0.2
+"""Search for free multipliers: steps, displacement (per largest coupling), factor on a step, longest step (same)."""
 
 
 @dataclass(frozen=True)
@@ -27,7 +35,7 @@ class Curvature:
     eigenvalues : (d,) ascending, dimensionless (fixed-point directions count 1).
     root_vectors : (Na, d), R times the eigenvectors: change of the correlators P along each mode, unit of 1/sqrt(meV).
     v : (Na, Na) quadratic form among the active channels.
-    feedback : (Na, Na) change C^T dlambda of the multipliers' fields that answers one of the active fields, first order.
+    feedback : (Na, Na) fields C^T dlambda by which the multipliers answer a change of the fields, in first order.
     """
 
     eigenvalues: Array
@@ -88,11 +96,53 @@ def spectral_form(m: Array, c: Array, v: Array) -> Curvature:
     # orthonormal directions of r^T C^T leaves out those that are rounding noise.
     u, sizes, w = np.linalg.svd(r.T @ c.T, full_matrices=False)
     free = sizes > FROZEN * np.sqrt(largest)
-    u = u[:, free]
-    feedback = -c.T @ (w[free].T / sizes[free]) @ (r @ u).T
-    r = r - (r @ u) @ u.T
+    firm = sizes > FIRM * np.sqrt(largest)
+    feedback = -c.T @ (w[firm].T / sizes[firm]) @ (r @ u[:, firm]).T
+    r = r - (r @ u[:, free]) @ u[:, free].T
     eigenvalues, z = _eigh(np.eye(r.shape[1]) + r.T @ v @ r)
     return Curvature(eigenvalues, r @ z, v, feedback)
+
+
+def supported(problem: Problem, point: Point, here: Curvature) -> tuple[Point, Curvature]:
+    """The same state with those free multipliers for which its lowest curvature is highest or positive.
+
+    A gap answers a constraint only by exp(-gap/T). At low T a whole range of multipliers then satisfies it, all with
+    the same state but not the same curvature. If one choice makes the Lagrangian F + lambda.(C P - target) a minimum,
+    F is one under the constraints. The lowest curvature of the Lagrangian is concave in lambda, and the constraint
+    error g that its eigenvector makes in second order is a supergradient, along which Polyak's steps lead there.
+    Source: USSR Comput. Math. Math. Phys. 9, 14 (1969), "Minimization of unsmooth functionals" (from memory).
+    """
+    if here.lowest >= -ZERO:
+        return point, here
+    model = problem.model
+    m, q = stiffness(problem, point.state)
+    free = q[:, m * model.scale < FREE]
+    best, highest, limit = point, here, point.free_energy + ROUNDING * model.scale
+    for _ in range(MOST_SUPPORTS if free.size else 0):
+        if highest.lowest >= -ZERO:
+            break
+        error, length = _second_order_error(problem, point, here)
+        g = free @ (free.T @ error)
+        step = -OVERSHOT * here.lowest * length / 2 * g / (g @ g + 1e-300)
+        step *= FARTHEST * model.scale / max(np.abs(step).max(), FARTHEST * model.scale)
+        point = point_at(problem, point.phi + model.c.T @ step)
+        if not (point.free_energy <= limit and point.constraint_error <= 10 * CONSTRAINT_TOLERANCE):
+            break
+        here = curvature_at(problem, point)
+        if here.lowest > highest.lowest:
+            best, highest = point, here
+    return best, highest
+
+
+def _second_order_error(problem: Problem, point: Point, here: Curvature) -> tuple[Array, float]:
+    """Constraint error (M,) that a displacement y along the softest mode makes in second order, and y.y."""
+    model = problem.model
+    mode = here.v @ here.root_vectors[:, 0]
+    mode *= DISPLACED * model.scale / np.abs(mode).max()
+    fields = np.zeros(model.n_channels)
+    fields[model.active] = mode
+    both = (problem.evaluate(point.phi + sign * fields).p for sign in (1, -1))
+    return model.c @ sum(both) / 2 - model.target, float((here.coordinates(mode) ** 2).sum())
 
 
 def gauge_copies(problem: Problem, point: Point) -> list[Point]:

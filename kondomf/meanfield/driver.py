@@ -7,13 +7,14 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies
+from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies, supported
 from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, ROUNDING, Point, Problem, point_at
 from kondomf.meanfield.steps import Mixing, StationaryNewton, Step, TrustRegion
 
 Array = NDArray[np.float64]
 
 MOST_CORRECTIONS = 1
+"""Corrections of a trial step; each costs as much as the trial itself."""
 
 
 @dataclass(frozen=True)
@@ -113,6 +114,7 @@ def _go_down(
             left_saddle, memory = point, step.init()
         change, memory = step.propose(problem, point, memory)
         trial = _trial(problem, point, step, change, memory)
+        # A state that violates its constraints has no energy to compare.
         solved = trial.constraint_error <= max(10 * CONSTRAINT_TOLERANCE, point.constraint_error)
         accepted = trial.is_finite and solved and step.improves(point, trial, ROUNDING * scale)
         memory = step.judge(memory, accepted, trial.free_energy - point.free_energy)
@@ -128,16 +130,23 @@ def certify(problem: Problem, point: Point, settings: Settings) -> tuple[Descent
     The gauge copies of a decoupled state are the same physical state but see different uniform hybridizations, so
     its lowest curvature is the lowest over all of them.
     """
-    here = curvature_at(problem, point)
+    point, here = _with_curvature(problem, point, settings)
     softest, lowest = point, here.lowest
     if is_decoupled(problem, point, settings):
         for copy in gauge_copies(problem, point):
-            curvature = curvature_at(problem, copy)
+            copy, curvature = _with_curvature(problem, copy, settings)
             if curvature.lowest < lowest:
                 softest, lowest = copy, curvature.lowest
     if lowest >= -settings.curvature:
         return Descent(point, "minimum", "stationary; F falls in no direction", here, lowest, ()), point
     return Descent(point, "saddle", "stationary; there are directions in which F falls", here, lowest, ()), softest
+
+
+def _with_curvature(problem: Problem, point: Point, settings: Settings) -> tuple[Point, Curvature]:
+    """A stationary point, with other free multipliers if its own leave the curvature negative, and its curvature."""
+    here = curvature_at(problem, point)
+    other, curvature = supported(problem, point, here)
+    return (other, curvature) if is_stationary(other, problem.model.scale, settings) else (point, here)
 
 
 def _trial(problem: Problem, point: Point, step: Step, change: Array, memory: Any) -> Point:

@@ -25,6 +25,7 @@ KEPT = 2**21
 class Evaluation:
     """Gaussian state of the fields phi.
 
+    phi : (N,) the fields, meV.
     omega : grand potential of H_MF per magnetic cell, meV.
     entropy : entropy per magnetic cell, in k_B.
     p : (N,) correlators P_p = <i gamma_a(0) gamma_b(R)> of the channels.
@@ -32,6 +33,7 @@ class Evaluation:
     chunks : eigenvalues (Nk, n) and eigenvectors (Nk, n, n) of h(k) with their slice of the zone; empty unless kept.
     """
 
+    phi: Array
     omega: float
     entropy: float
     p: Array
@@ -73,42 +75,47 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
         phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
         h = bloch_matrix(model, phi, phases)
         if not np.abs(h).max() < HUGE * t:  # also catches NaN, on which eigh would raise
-            return _undefined(model)
+            return undefined(model, phi)
         e, u = np.linalg.eigh(h)
-        x = np.abs(e) / (2 * t)
-        log_cosh = x + np.log1p(np.exp(-2 * x))
+        x = np.abs(e) / t
+        y = np.exp(-x)
         tanh = np.tanh(e / (2 * t))
         w = zone.weight[part]
-        omega -= t / 2 * float(w @ log_cosh.sum(axis=1))
-        entropy += float(w @ (log_cosh - x * np.abs(tanh)).sum(axis=1)) / 2
+        omega -= t / 2 * float(w @ (x / 2 + np.log1p(y)).sum(axis=1))
+        entropy += float(w @ (np.log1p(y) + x * y / (1 + y)).sum(axis=1)) / 2
         matrix = (u * tanh[:, None, :]) @ u.conj().swapaxes(1, 2)
         real_space += (phases.conj() * w[:, None]).T @ matrix.reshape(-1, n * n)
         if keep:
             kept.append((part, e, u))
     correlators = -real_space.reshape(-1, n, n).imag
-    return Evaluation(omega, entropy, correlators[model.position], correlators, tuple(kept))
+    return Evaluation(phi, omega, entropy, correlators[model.position], correlators, tuple(kept))
 
 
-def _undefined(model: MeanFieldModel) -> Evaluation:
+def undefined(model: MeanFieldModel, phi: Array) -> Evaluation:
     """What fields without a usable Bloch matrix give: not a number throughout."""
     n = model.n_majorana
     correlators = np.full((len(model.lattice_vectors), n, n), np.nan)
-    return Evaluation(np.nan, np.nan, correlators[model.position], correlators, ())
+    return Evaluation(phi, np.nan, np.nan, correlators[model.position], correlators, ())
 
 
 def thermal_weight(e: Array, t: float) -> Array:
     """X_nm = (tanh(e_n/2T) - tanh(e_m/2T))/(e_n - e_m), its limit (1 - tanh^2)/2T at equal energies; (..., n, n).
 
-    Written as sinh(d)/d * sech sech / 2T with d = (e_n - e_m)/2T, which loses no digits near degeneracy.
+    With the Fermi function f = (1 + tanh)/2 and g = 1 - f this is 2 (f_n g_m - g_n f_m)/(e_n - e_m), and near
+    degeneracy 2 sqrt(f_n g_n f_m g_m)/T sinh(d)/d with d = (e_n - e_m)/2T: no digits are lost at any temperature.
     """
-    x = e / (2 * t)
-    d = np.abs(x[..., :, None] - x[..., None, :])
-    # ln sech of both, and ln(sinh d / d); exponentials are combined before they can overflow.
-    log_cosh = np.abs(x) + np.log1p(np.exp(-2 * np.abs(x))) - np.log(2)
-    small = d < 1e-4
-    safe = np.where(small, 1.0, d)
-    log_sinh = np.where(small, d * d / 6, safe + np.log(-np.expm1(-2 * safe)) - np.log(2 * safe))
-    return np.exp(log_sinh - log_cosh[..., :, None] - log_cosh[..., None, :]) / (2 * t)
+    root = np.exp(-np.abs(e) / (2 * t))
+    large = 1 / (1 + root * root)
+    small = root * root * large
+    f, g = np.where(e > 0, large, small), np.where(e > 0, small, large)
+    difference = e[..., :, None] - e[..., None, :]
+    d = difference / (2 * t)
+    near = np.abs(d) < 1 / 4
+    d2 = np.where(near, d * d, 0.0)
+    series = 1 + d2 / 6 * (1 + d2 / 20 * (1 + d2 / 42 * (1 + d2 / 72 * (1 + d2 / 110))))
+    close = 2 / t * (root * large)[..., :, None] * (root * large)[..., None, :] * series
+    far = 2 * (f[..., :, None] * g[..., None, :] - g[..., :, None] * f[..., None, :])
+    return np.where(near, close, far / np.where(near, 1.0, difference))
 
 
 def response(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, channels: NDArray[np.int64]) -> Array:

@@ -1,6 +1,6 @@
 """A constrained mean-field problem and its points: fields whose multipliers have been solved."""
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,14 +11,10 @@ from kondomf.model import MeanFieldModel
 
 Array = NDArray[np.float64]
 
-CONSTRAINT_TOLERANCE = 1e-10
-"""Largest allowed error of a constrained quantity in a solution. It enters F only in second order."""
+CONSTRAINT_TOLERANCE = 1e-12
+"""Largest allowed error of a constrained quantity in a solution. Times a multiplier it must vanish in the rounding of F:
+near a polarised state F would fall by leaving the constraint, and stop at no stationary point."""
 MAX_MULTIPLIER_EVALUATIONS = 250
-RAISED = 0.1
-"""Temperature, in units of the largest coupling, at which no constrained quantity is frozen."""
-FROZEN = 1e-8
-"""Constrained quantities that respond by less than this, per largest coupling, are frozen."""
-ROUGH = 1e-3
 ROUNDING = 1e-11
 """Rounding error of F in units of the largest coupling; a rise within it is none."""
 
@@ -102,37 +98,28 @@ def _solve_multipliers(problem: Problem, phi: Array, tolerance: float) -> tuple[
     The response of a constrained quantity vanishes at Dirac points, in gaps and on coarse grids at low T. There a
     Newton step is cut to the largest coupling and the root of the directional derivative, which falls along
     the line, is bracketed.
-    Where T is far below a gap, a whole range of multipliers satisfies the constraints within every tolerance, with the
-    same state but different curvatures; near its ends the quadratic expansion of F reaches nowhere. The multipliers
-    of a raised temperature, found first, lie well inside.
     """
     model = problem.model
-    channels = model.constrained
-    c = model.c[:, channels]
     state = problem.evaluate(phi)
-    raised = RAISED * model.scale
     budget = problem.matrices + MAX_MULTIPLIER_EVALUATIONS * len(problem.zone.k)
     while problem.matrices < budget:
         gradient = model.c @ state.p - model.target
         if np.abs(gradient).max() <= tolerance or not np.isfinite(gradient).all():
             break
-        m, q = np.linalg.eigh(-c @ response(model, problem.zone, state, channels) @ c.T)
-        if m[0] * model.scale < FROZEN and model.temperature < raised:
-            phi, raised = _raised_multipliers(problem, phi, raised), 0.0
-            state = problem.evaluate(phi)
-            continue
+        m, q = stiffness(problem, state)
         g = q.T @ gradient
-        step = q @ np.where(np.abs(g) < 0.1 * tolerance, 0.0, g / np.maximum(m, np.abs(g) / model.scale + 1e-300))
+        wrong = np.abs(g) > 0.1 * tolerance  # the others are rounding, which a frozen response would blow up
+        step = q @ np.where(wrong, g / np.maximum(m, np.abs(g) / model.scale + 1e-300), 0.0)
         phi, state = _line_search(problem, phi, model.c.T @ step, step, float(gradient @ step), budget)
     return phi, state
 
 
-def _raised_multipliers(problem: Problem, phi: Array, temperature: float) -> Array:
-    """Fields (N,) whose multipliers satisfy the constraints roughly at another temperature (meV)."""
-    raised = replace(problem, model=replace(problem.model, temperature=temperature))
-    phi, _ = _solve_multipliers(raised, phi, ROUGH)
-    problem.matrices += raised.matrices
-    return phi
+def stiffness(problem: Problem, state: Evaluation) -> tuple[Array, Array]:
+    """Eigenvalues (M,), 1/meV, and eigenvectors (M, M) of C M C^T, the response of the constrained quantities."""
+    channels = problem.model.constrained
+    c = problem.model.c[:, channels]
+    m, q = np.linalg.eigh(-c @ response(problem.model, problem.zone, state, channels) @ c.T)
+    return m, q
 
 
 def _line_search(

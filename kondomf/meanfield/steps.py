@@ -10,7 +10,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.meanfield.curvature import Curvature, curvature_at
+from kondomf.meanfield.curvature import Curvature, curvature_at, supported
 from kondomf.meanfield.problem import ROUNDING, Point, Problem
 
 Array = NDArray[np.float64]
@@ -83,10 +83,15 @@ class Mixing:
 
 @dataclass(frozen=True)
 class TrustMemory:
-    """Trust radius in the metric of the response (sqrt meV), curvature of the present point, predicted
-    change of F (0 where rounding hides it)."""
+    """What a trust region remembers.
+
+    radius : trust radius in the metric of the response, sqrt(meV).
+    origin, curvature : the present point, its free multipliers chosen (see `supported`), and the curvature there.
+    predicted : change of F that the step should bring, meV; 0 where rounding hides it.
+    """
 
     radius: float | None = None
+    origin: Point | None = field(default=None, repr=False)
     curvature: Curvature | None = field(default=None, repr=False)
     predicted: float = 0.0
 
@@ -100,7 +105,7 @@ class TrustRegion:
     Source: SIAM J. Sci. Stat. Comput. 4, 553 (1983), "Computing a trust region step".
     """
 
-    floor: float = 1e-10
+    floor: float = 1e-8
     stiff: float = 0.03
     name: str = "newton"
     leaves_saddles: bool = True
@@ -110,14 +115,18 @@ class TrustRegion:
 
     def propose(self, problem: Problem, point: Point, memory: TrustMemory) -> tuple[Array, TrustMemory]:
         """Change of the active fields (Na,) and the memory to go with it."""
-        here = memory.curvature or curvature_at(problem, point)
+        origin, here = memory.origin, memory.curvature
+        if origin is None or here is None:
+            origin, here = supported(problem, point, curvature_at(problem, point))
         radius = memory.radius or float(np.sqrt(0.1 * problem.model.scale))
-        r = point.residual[problem.model.active]
+        active = problem.model.active
+        r = origin.residual[active]
         gradient = here.coordinates(r)
         y, nu = trust_region_minimum(here.eigenvalues, gradient, radius, self.floor)
         predicted = float(gradient @ y + here.eigenvalues @ y**2 / 2)
         visible = predicted < -ROUNDING * problem.model.scale
-        return here.fields(y, r, nu), TrustMemory(radius, here, predicted if visible else 0.0)
+        change = here.fields(y, r, nu) + (origin.phi - point.phi)[active]
+        return change, TrustMemory(radius, origin, here, predicted if visible else 0.0)
 
     def correct(self, problem: Problem, point: Point, trial: Point, memory: TrustMemory) -> Array | None:
         """Change that takes `trial` back to the floor of a curved valley: a Newton step in the stiff modes alone.
@@ -146,7 +155,8 @@ class TrustRegion:
         assert memory.radius is not None
         quality = change / memory.predicted if memory.predicted else 1.0
         factor = 0.4 if not accepted or quality < 0.25 else (1.6 if quality > 0.8 else 1.0)
-        return TrustMemory(memory.radius * factor, None if accepted else memory.curvature)
+        radius = memory.radius * factor
+        return TrustMemory(radius) if accepted else replace(memory, radius=radius)
 
 
 @dataclass(frozen=True)
@@ -170,7 +180,7 @@ class StationaryNewton:
         r = point.residual[problem.model.active]
         slope = np.where(np.abs(here.eigenvalues) < self.floor, np.inf, here.eigenvalues)
         y = -here.coordinates(r) / slope
-        return damping * here.fields(y, r, 0.0), TrustMemory(damping, here)
+        return damping * here.fields(y, r, 0.0), TrustMemory(damping, point, here)
 
     def correct(self, problem: Problem, point: Point, trial: Point, memory: TrustMemory) -> Array | None:
         """A stationary point is sought by plain Newton steps."""
