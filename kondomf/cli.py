@@ -374,6 +374,24 @@ def fit(
     ctx.exit(0 if all(one.converged for one in found.fits) else EXIT_NUMERICS)
 
 
+@main.command(epilog=example("kondomf warmup"))
+def warmup() -> None:
+    """Compile the kernels ahead of time, once per machine and version.
+
+    Without it the first computation that is long enough compiles them, and short ones do with plain numpy.
+    """
+    import time
+
+    from kondomf.meanfield.kernels import compile_now, kept
+
+    began, there = time.perf_counter(), kept()
+    if not there:
+        click.echo("compiling the kernels, some 20 seconds", err=True)
+    compile_now()
+    done = "were compiled already" if there else f"compiled in {time.perf_counter() - began:.0f} s"
+    click.echo(f"kernels {done}" + ("" if kept() else "; no directory can keep them: set NUMBA_CACHE_DIR"))
+
+
 def number_list(option: str, text: str) -> list[float]:
     """Numbers "1,2,5" or "FROM:TO:POINTS" (evenly spaced), all above zero. Raises InputError for anything else."""
     import numpy as np

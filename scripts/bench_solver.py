@@ -8,9 +8,10 @@ command goes on with it.
 
 Every method starts from the same fields and solves the multipliers exactly in every step, with the package's code:
 
-    solver    kondomf.meanfield.driver.descend
+    solver    kondomf.meanfield.driver.descend, evaluations in plain numpy
+    compiled  the same with the compiled kernels on one thread, loaded beforehand
     linear    phi <- phi + 0.3 r
-    Anderson  the same damping with the last five residuals (J. ACM 12, 547 (1965))
+    anderson  the same damping with the last five residuals (J. ACM 12, 547 (1965))
 
 The mixing loops stop when residual and constraints are within the solver's tolerance, or after 2000 steps. Their ends
 are certified by the solver's curvature: minimum, saddle, or stalled (the residual was not reached).
@@ -32,6 +33,7 @@ import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from dataclasses import dataclass
+from itertools import product
 from pathlib import Path
 from typing import Any
 
@@ -40,6 +42,8 @@ from check_values import T, material
 from threadpoolctl import threadpool_limits
 
 from kondomf.meanfield.driver import Settings, certify, descend, is_stationary
+from kondomf.meanfield.engine import Engine
+from kondomf.meanfield.kernels import compile_now
 from kondomf.meanfield.problem import Point, Problem, point_at
 from kondomf.meanfield.starts import noise
 from kondomf.meanfield.zone import uniform
@@ -59,10 +63,11 @@ SETS: tuple[dict[str, Any], ...] = (
     {"kitaev": -0.05, "kondo": 1.0, "filling": 1.0, "magnetic": True, "gamma": 0.02},
     {"kitaev": -1.0, "kondo": 1.5, "filling": 0.75, "magnetic": True, "gamma": 0.3, "heisenberg": 0.2},
 )
-METHODS = ("solver", "linear", "anderson")
+METHODS = ("solver", "compiled", "linear", "anderson")
+OURS = METHODS[:2]
 SETTINGS = Settings()
 DAMPING, DEPTH, LIMIT = 0.3, 5, 2000
-LIMITS = {"solver": SETTINGS.mixing_steps + SETTINGS.newton_steps, "linear": LIMIT, "anderson": LIMIT}
+LIMITS = dict.fromkeys(OURS, SETTINGS.mixing_steps + SETTINGS.newton_steps) | dict.fromkeys(METHODS[2:], LIMIT)
 CLOSE = 1e-6
 """F counts as reached within this, in units of t."""
 
@@ -104,17 +109,17 @@ def mix(problem: Problem, fields: np.ndarray, depth: int, trace: Trace) -> Point
 def run(number: int, start: int, method: str) -> dict[str, Any]:
     """One start of one set by one method, as a record of the results file."""
     model = build_model(material(**SETS[number]))
-    problem = Problem(model, uniform(12, "midpoint"))
+    problem = Problem(model, uniform(12, "midpoint"), engine=Engine(compiled=method == "compiled"))
     fields = problem.first_fields(noise(model, np.random.default_rng(start), 0.5))
     trace = Trace(time.process_time(), [])
-    if method == "solver":
+    if method in OURS:
         descent = descend(problem, fields, progress=lambda _name, _matrices, f, _residual: trace.add(f))
         point, outcome, cause = descent.point, descent.status, descent.message
     else:
         point = mix(problem, fields, DEPTH if method == "anderson" else 0, trace)
         outcome, cause = "stalled", f"residual not reached in {trace.steps} steps"
     cpu, evaluations = time.process_time() - trace.began, problem.matrices // len(problem.zone.k)
-    if method != "solver" and point.is_finite and is_stationary(point, model.scale, SETTINGS):
+    if method not in OURS and point.is_finite and is_stationary(point, model.scale, SETTINGS):
         outcome = certify(problem, point, SETTINGS)[0].status
     return {
         "parameters": SETS[number],
@@ -132,8 +137,10 @@ def run(number: int, start: int, method: str) -> dict[str, Any]:
     }
 
 
-def one_thread() -> None:
+def get_ready() -> None:
+    """One BLAS thread, kernels loaded."""
     threadpool_limits(1, user_api="blas")
+    compile_now()
 
 
 def read(path: Path) -> list[dict[str, Any]]:
@@ -156,7 +163,7 @@ def complete(path: Path, sets: list[int], starts: int, processes: int) -> dict[t
     wanted = [(number, start, method) for start in range(starts) for number in sets for method in METHODS]
     missing = [job for job in wanted if job not in found]
     os.environ |= {"OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"}
-    with ProcessPoolExecutor(processes, initializer=one_thread) as pool, path.open("a") as file:
+    with ProcessPoolExecutor(processes, initializer=get_ready) as pool, path.open("a") as file:
         jobs = {pool.submit(run, *job): job for job in missing}
         for count, job in enumerate(as_completed(jobs), 1):
             found[jobs[job]] = job.result()
@@ -191,8 +198,12 @@ def targets(records: list[dict[str, dict[str, Any]]]) -> Iterator[tuple[str, Cal
     yield "any", end
 
 
-def show_set(number: int, records: list[dict[str, dict[str, Any]]]) -> dict[str, list[tuple[float, float]]]:
-    """Print the ends and times of one set; per target the times of solver and linear mixing of every start."""
+Times = dict[tuple[str, str], list[tuple[float, float]]]
+"""Per method of ours and target: seconds of the method and of linear mixing for every start."""
+
+
+def show_set(number: int, records: list[dict[str, dict[str, Any]]]) -> Times:
+    """Print the ends and times of one set."""
     print(f"\nset {number}: " + ", ".join(f"{name} {value}" for name, value in SETS[number].items()))
     for method in METHODS:
         mine = [start[method] for start in records]
@@ -203,15 +214,15 @@ def show_set(number: int, records: list[dict[str, dict[str, Any]]]) -> dict[str,
             f"  {method:9} {counts:34} median {middle['evaluations']:6.0f} evaluations, {middle['steps']:5.0f} steps, "
             f"{middle['cpu']:6.2f} s"
         )
-    times: dict[str, list[tuple[float, float]]] = {}
-    for name, target in targets(records):
-        pairs = [[seconds(start[m], target(i, m)) for m in METHODS[:2]] for i, start in enumerate(records)]
-        times[name] = [(ours[0], theirs[0]) for ours, theirs in pairs]
+    times: Times = {}
+    for method, (name, target) in product(OURS, targets(records)):
+        pairs = [[seconds(start[m], target(i, m)) for m in (method, "linear")] for i, start in enumerate(records)]
+        times[method, name] = [(ours[0], theirs[0]) for ours, theirs in pairs]
         reached = [sum(pair[j][1] for pair in pairs) for j in (0, 1)]
-        ours, theirs = np.median(times[name], axis=0)
+        ours, theirs = np.median(times[method, name], axis=0)
         print(
-            f"  to {name:6} solver {ours:7.2f} s (reached {reached[0]}), linear {theirs:7.2f} s (reached {reached[1]})"
-            f"; ratio {ratio(times[name]):.1f}"
+            f"  to {name:6} {method:8} {ours:7.2f} s (reached {reached[0]}), linear {theirs:7.2f} s (reached "
+            f"{reached[1]}); ratio {ratio(times[method, name]):.1f}"
         )
     return times
 
@@ -223,16 +234,16 @@ def ratio(times: list[tuple[float, float]]) -> float:
 
 def show(found: dict[tuple[int, int, str], dict[str, Any]], sets: list[int], starts: int) -> None:
     """All tables: every set, the failures of the solver with their causes, totals."""
-    everything: dict[str, list[tuple[float, float]]] = {}
+    everything: Times = {}
     for number in sets:
         records = [{method: found[number, start, method] for method in METHODS} for start in range(starts)]
-        for name, times in show_set(number, records).items():
-            everything.setdefault(name, []).extend(times)
+        for which, times in show_set(number, records).items():
+            everything.setdefault(which, []).extend(times)
     print("\nstarts of the solver without a certified minimum:")
-    failed = [(job, r) for job, r in found.items() if job[2] == "solver" and r["outcome"] != "minimum"]
-    for (number, start, _), r in failed:
+    failed = [(job, r) for job, r in found.items() if job[2] in OURS and r["outcome"] != "minimum"]
+    for (number, start, method), r in failed:
         print(
-            f"  set {number}, start {start}: {r['outcome']}, {r['cause']}; F {r['free_energy']:.9f}, "
+            f"  set {number}, start {start}, {method}: {r['outcome']}, {r['cause']}; F {r['free_energy']:.9f}, "
             f"residual {r['residual']:.1e}, constraints {r['constraint_error']:.1e}"
         )
     print("  none" if not failed else "", f"\ntotal of {len(sets)} sets, {starts} starts each:", sep="")
@@ -243,9 +254,12 @@ def show(found: dict[tuple[int, int, str], dict[str, Any]], sets: list[int], sta
             shares[r["outcome"]] += 1
         text = ", ".join(f"{name} {100 * count / len(mine):.1f} %" for name, count in sorted(shares.items()))
         print(f"  {method:9} {text}; median {np.median([r['evaluations'] for r in mine]):.0f} evaluations")
-    for name, times in everything.items():
+    for (method, name), times in everything.items():
         ours, theirs = np.median(times, axis=0)
-        print(f"  to {name:6} median {ours:.2f} s and {theirs:.2f} s, median of ratios {ratio(times):.1f}")
+        print(
+            f"  to {name:6} {method:8} median {ours:.3f} s, linear {theirs:.2f} s: ratio {theirs / ours:.1f}, "
+            f"median of ratios {ratio(times):.1f}"
+        )
 
 
 def main() -> None:

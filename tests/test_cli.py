@@ -18,7 +18,7 @@ from kondomf.errors import InputError
 @pytest.mark.parametrize("command", COMMANDS)
 def test_the_help_of_every_command_shows_an_example_of_it(command):
     text = done(command, "--help")
-    assert f"Example:\n    kondomf {command} " in text
+    assert f"Example:\n    kondomf {command}" in text
     assert text == done(command, "-h")
 
 

@@ -2,7 +2,7 @@
 
 from collections import deque
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import combinations, pairwise
 
 import numpy as np
@@ -13,6 +13,7 @@ from kondomf.errors import InputError
 from kondomf.material import Material
 from kondomf.meanfield.continuation import AROUND, CONTINUOUS, LIMIT, ZERO, BranchPoint, End, Family, Follower
 from kondomf.meanfield.driver import descend
+from kondomf.meanfield.engine import engine_for, search_work
 from kondomf.meanfield.search import solve
 from kondomf.meanfield.solution import trial
 from kondomf.meanfield.starts import Start, carried_over
@@ -20,6 +21,8 @@ from kondomf.meanfield.starts import Start, carried_over
 DISCRETE = ("zone", "search")
 """Sections of a material whose numbers are no parameters of the physics."""
 MOST_BRANCHES = 12
+STARTS = 30
+"""Starts of a search that take about as long as following all branches."""
 PRECISION = 1e-4
 """Default precision of ends and crossings in units of the range."""
 SAME_F = 1e-7
@@ -96,6 +99,8 @@ def follow_branches(
     family = Family(material, key, low, high)
     for x in (low, high):
         family.material_at(x)
+    problem = family.at(high)
+    family = replace(family, engine=engine_for(search_work(problem.model, problem.zone, STARTS)))
     precision = PRECISION * (high - low) if precision is None else precision
     if not 0 < precision < high - low:
         raise InputError(f"precision {precision:g} of {key}: give a number above 0 and below the range")

@@ -17,6 +17,7 @@ from kondomf.material import Material, with_value
 from kondomf.meanfield.classes import class_basis
 from kondomf.meanfield.curvature import Curvature, curvature_at, gauge_copies
 from kondomf.meanfield.driver import Settings, descend, is_decoupled, is_stationary
+from kondomf.meanfield.engine import NUMPY, Engine
 from kondomf.meanfield.problem import Point, Problem, point_at
 from kondomf.meanfield.starts import Start
 from kondomf.meanfield.zone import uniform
@@ -49,6 +50,7 @@ class Family:
     key: str
     low: float
     high: float
+    engine: Engine = NUMPY
 
     @property
     def span(self) -> float:
@@ -62,7 +64,7 @@ class Family:
         material = self.material_at(x or 1e-12 * self.span)
         model = build_model(material)
         zone = uniform(material.zone.points, material.zone.offset)
-        return Problem(model, zone, class_basis(model, material.search.phase))
+        return Problem(model, zone, class_basis(model, material.search.phase), self.engine)
 
     def move(self, point: Point, x: float, change: Array | float = 0.0) -> tuple[Problem, Point]:
         """Problem and point at x with the active fields of `point` plus `change` (Na,)."""

@@ -6,7 +6,6 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import eigh
 
-from kondomf.meanfield.evaluate import response
 from kondomf.meanfield.problem import CONSTRAINT_TOLERANCE, ROUNDING, Point, Problem, point_at, stiffness
 
 Array = NDArray[np.float64]
@@ -64,7 +63,7 @@ def curvature_at(problem: Problem, point: Point, *, full_space: bool = False) ->
     M = -Pi, projected on the constraints: M - M C^T (C M C^T)^-1 C M = R R^T; H = 1 + R^T V R.
     """
     model, active = problem.model, problem.model.active
-    m = -response(model, problem.zone, point.state, active)
+    m = -problem.response(point.state, active)
     v = model.v[np.ix_(active, active)]
     c = model.c[:, active]
     basis = None if full_space else problem.basis

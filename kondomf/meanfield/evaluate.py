@@ -1,5 +1,6 @@
 """One evaluation: fields phi -> free energy, correlators, and the response to the fields (plain numpy)."""
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -59,6 +60,16 @@ def bloch_matrix(model: MeanFieldModel, phi: Array, phases: Complex) -> Complex:
     return half + half.conj().swapaxes(1, 2)
 
 
+def decompositions(
+    model: MeanFieldModel, zone: ZoneRule, phi: Array
+) -> Iterator[tuple[slice, Complex, Array, Complex]]:
+    """Part of the zone, phases e^(ik.R) (Nk, NR), eigenvalues (Nk, n) and eigenvectors (Nk, n, n) of h(k), in turn."""
+    for start in range(0, len(zone.k), CHUNK):
+        part = slice(start, start + CHUNK)
+        phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
+        yield part, phases, *np.linalg.eigh(bloch_matrix(model, phi, phases))
+
+
 def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = False) -> Evaluation:
     """Correlators and grand potential of H_MF = sum_p phi_p O_p at the model's temperature.
 
@@ -70,13 +81,10 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
     omega = entropy = 0.0
     real_space = np.zeros((len(model.lattice_vectors), n * n), dtype=complex)
     kept = []
-    for start in range(0, len(zone.k), CHUNK):
-        part = slice(start, start + CHUNK)
-        phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
-        h = bloch_matrix(model, phi, phases)
-        if not np.abs(h).max() < HUGE * t:  # also catches NaN, on which eigh would raise
-            return undefined(model, phi)
-        e, u = np.linalg.eigh(h)
+    bound = 4 * np.abs(phi).max() * len(phi)
+    if not bound < HUGE * t:  # also catches NaN, on which eigh would raise
+        return undefined(model, phi)
+    for part, phases, e, u in decompositions(model, zone, phi):
         x = np.abs(e) / t
         y = np.exp(-x)
         tanh = np.tanh(e / (2 * t))

@@ -5,15 +5,16 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from kondomf.meanfield.evaluate import Evaluation, evaluate, keep_freed_memory, response
+from kondomf.meanfield.engine import NUMPY, Engine
+from kondomf.meanfield.evaluate import Evaluation, keep_freed_memory
 from kondomf.meanfield.zone import ZoneRule
 from kondomf.model import MeanFieldModel
 
 Array = NDArray[np.float64]
 
 CONSTRAINT_TOLERANCE = 1e-12
-"""Largest allowed error of a constrained quantity in a solution. Times a multiplier it must vanish in the rounding of F:
-near a polarised state F would fall by leaving the constraint, and stop at no stationary point."""
+"""Largest allowed error of a constrained quantity in a solution. Times a multiplier it must vanish in the rounding of
+F: near a polarised state F would otherwise fall by leaving the constraint, and stop at no stationary point."""
 MAX_MULTIPLIER_EVALUATIONS = 250
 ROUNDING = 1e-11
 """Rounding error of F in units of the largest coupling; a rise within it is none."""
@@ -29,15 +30,20 @@ class Problem:
     model: MeanFieldModel
     zone: ZoneRule
     basis: Array | None = None
+    engine: Engine = NUMPY
     matrices: int = field(default=0, init=False, compare=False)
 
     def __post_init__(self) -> None:
         keep_freed_memory()
 
     def evaluate(self, phi: Array) -> Evaluation:
-        """Evaluation with kept eigen-decomposition, counted."""
+        """Evaluation at the fields phi (N,), counted."""
         self.matrices += len(self.zone.k)
-        return evaluate(self.model, self.zone, phi, keep=True)
+        return self.engine.evaluate(self.model, self.zone, phi)
+
+    def response(self, state: Evaluation, channels: NDArray[np.int64]) -> Array:
+        """Response (Nc, Nc), 1/meV, among `channels` at a state of `evaluate`."""
+        return self.engine.response(self.model, self.zone, state, channels)
 
     def first_fields(self, p: Array) -> Array:
         """Fields h + V P (N,) of correlators p (N,), brought into the class."""
@@ -118,7 +124,7 @@ def stiffness(problem: Problem, state: Evaluation) -> tuple[Array, Array]:
     """Eigenvalues (M,), 1/meV, and eigenvectors (M, M) of C M C^T, the response of the constrained quantities."""
     channels = problem.model.constrained
     c = problem.model.c[:, channels]
-    m, q = np.linalg.eigh(-c @ response(problem.model, problem.zone, state, channels) @ c.T)
+    m, q = np.linalg.eigh(-c @ problem.response(state, channels) @ c.T)
     return m, q
 
 

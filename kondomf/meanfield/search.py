@@ -12,6 +12,7 @@ from kondomf.material import Material
 from kondomf.meanfield.classes import CLASSES, class_basis
 from kondomf.meanfield.curvature import Curvature, curvature_at
 from kondomf.meanfield.driver import Descent, Settings, certify, descend
+from kondomf.meanfield.engine import Engine, engine_for, search_work
 from kondomf.meanfield.problem import Point, Problem, point_at
 from kondomf.meanfield.solution import SAME_ENERGY, Solution, Trial, trial
 from kondomf.meanfield.starts import Start, standard_starts, starts
@@ -55,12 +56,14 @@ def solve(
     only_starts: Iterable[Start] | None = None,
     settings: Settings | None = None,
     most_kept: int = MOST_KEPT,
+    engine: Engine | None = None,
     progress: Callable[[str], None] | None = None,
 ) -> Solution:
     """Lowest state of `material` in its search.phase, from its seeded starts, `extra_starts` and their descents.
 
     `only_starts` replaces the standard starts. The other distinct minima come along as `others`; `most_kept` ends are
-    refined on the full grid and certified. `progress` receives one line of text per finished start.
+    refined on the full grid and certified. `engine` computes; without it the one that is
+    done soonest. `progress` receives one line of text per finished start.
     Numerical failure is the status of the result.
     """
     began = time.perf_counter()
@@ -69,8 +72,10 @@ def solve(
     seeded = starts(model, material.search.starts, material.search.seed, hybridized_only=CLASSES[phase].hybridized)
     chosen = list(only_starts) if only_starts is not None else [*extra_starts, *seeded]
     points, offset, basis = material.zone.points, material.zone.offset, class_basis(model, phase)
-    fine = Problem(model, uniform(points, offset), basis)
-    coarse = Problem(model, uniform(2 * (points // 4), offset), basis) if points >= COARSE_FROM else None
+    zone = uniform(points, offset)
+    engine = engine or engine_for(search_work(model, zone, len(chosen)))
+    fine = Problem(model, zone, basis, engine)
+    coarse = Problem(model, uniform(2 * (points // 4), offset), basis, engine) if points >= COARSE_FROM else None
     with threadpool_limits(1, user_api="blas"):  # the matrices are small: more threads only wait for each other
         ends = _descend_all(coarse or fine, chosen, settings, progress)
         first, *rest = _distinct(ends)
@@ -170,8 +175,8 @@ def _certified(problem: Problem, end: _End, material: Material, settings: Settin
     """The solution of one end with its evidence, in its class and in the space of all fields."""
     model, descent = problem.model, end.descent
     cells = model.cell.size
-    everything = Problem(model, problem.zone)
-    doubled = Problem(model, uniform(2 * problem.zone.points, problem.zone.offset))
+    everything = replace(problem, basis=None)
+    doubled = replace(everything, zone=uniform(2 * problem.zone.points, problem.zone.offset))
     point = descent.point if problem.basis is None else point_at(everything, descent.point.phi)
     full, lowest, zeros, soft = _stability(problem, point, descent, settings)
     zone_error = abs(point_at(doubled, point.phi).free_energy - point.free_energy) / cells

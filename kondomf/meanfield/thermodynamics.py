@@ -17,7 +17,8 @@ from scipy.linalg import block_diag, expm
 
 from kondomf.material import Material, material_from_dict
 from kondomf.meanfield.curvature import spectral_form
-from kondomf.meanfield.evaluate import Complex, Evaluation, bloch_matrix, evaluate, response, thermal_weight
+from kondomf.meanfield.engine import Engine, engine_for
+from kondomf.meanfield.evaluate import Complex, Evaluation, bloch_matrix, decompositions, thermal_weight
 from kondomf.meanfield.solution import Solution
 from kondomf.meanfield.zero_modes import ZERO
 from kondomf.meanfield.zone import ZoneRule, uniform
@@ -36,6 +37,8 @@ STATIONARY = 1e-7
 """Largest residual, in units of the largest coupling, of a state that is stationary in the space of all fields."""
 ROUNDING = 1e-20
 """A field or potential whose bare response is below this fraction of the usual commutes with the Hamiltonian."""
+FULL = 10
+"""A response takes about as long as this many evaluations."""
 NUMBERS = 2**18
 """Numbers in one block of matrices of a forcing; bounds the memory."""
 EMU_PER_MOL = N_A * BOHR_MAGNETON * MEV * 1e-1
@@ -101,9 +104,10 @@ def thermodynamics(solution: Solution) -> Thermodynamics:
     if reason:
         return _refused(solution, reason)
     matrices = _forcing_matrices(model, material_from_dict(solution.inputs))
-    state = evaluate(model, solution.zone, solution.phi, keep=True)
+    engine = engine_for(FULL * len(solution.zone.k) * model.n_majorana**2)
+    state = engine.evaluate(model, solution.zone, solution.phi)
     try:
-        bare = _bare_response(model, solution.zone, state, matrices)
+        bare = _bare_response(model, solution.zone, state, matrices, engine)
         closed, open_ = (_second_derivatives(model, bare, fixed_filling=fixed) for fixed in (True, False))
     except np.linalg.LinAlgError as error:
         return _refused(solution, f"linear algebra failed: {error}")
@@ -172,11 +176,11 @@ Block = tuple[slice, Complex, Array, Array, Complex]
 """Part of the zone, eigenvectors U (Nk, n, n), weights (Nk,), X (Nk, n, n), forcings U+ D U (5, Nk, n, n)."""
 
 
-def _blocks(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, matrices: Complex) -> Iterator[Block]:
+def _blocks(model: MeanFieldModel, zone: ZoneRule, phi: Array, matrices: Complex) -> Iterator[Block]:
     """The forcings in the eigenbasis of h(k); temperature, with its field change -phi/T, is the diagonal -e/T."""
     n = model.n_majorana
     step = max(1, NUMBERS // n**2)
-    for part, energies, vectors in state.chunks:
+    for part, _, energies, vectors in decompositions(model, zone, phi):
         for start in range(0, len(energies), step):
             e, u = energies[start : start + step], vectors[start : start + step]
             here = slice(part.start + start, part.start + start + len(e))
@@ -185,10 +189,10 @@ def _blocks(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, matrices: 
             yield here, u, zone.weight[here], thermal_weight(e, model.temperature), d
 
 
-def _among_forcings(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, matrices: Complex) -> Array:
+def _among_forcings(model: MeanFieldModel, zone: ZoneRule, phi: Array, matrices: Complex) -> Array:
     """Minus the response of the forcings to each other at frozen mean fields, (5, 5): the sum of X D D* / 4."""
     among = np.zeros((1 + len(matrices),) * 2)
-    for _, _, w, x, d in _blocks(model, zone, state, matrices):
+    for _, _, w, x, d in _blocks(model, zone, phi, matrices):
         among += np.tensordot(w[:, None, None] * x * d, d.conj(), axes=([1, 2, 3], [1, 2, 3])).real / 4
     usual = np.abs(matrices).max(axis=(1, 2)) ** 2 / model.scale
     nothing = among.diagonal() <= np.concatenate([[0.0], ROUNDING * usual])
@@ -196,22 +200,24 @@ def _among_forcings(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, ma
     return among
 
 
-def _bare_response(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, matrices: Complex) -> Array:
+def _bare_response(
+    model: MeanFieldModel, zone: ZoneRule, state: Evaluation, matrices: Complex, engine: Engine
+) -> Array:
     """Minus the response at frozen mean fields of the active channels, then the forcings, (Na + 5, Na + 5).
 
     A forcing changes tanh(h/2T) by U (X o U+ D U) U+, and with it the correlators.
     """
     n, count = model.n_majorana, 1 + len(matrices)
     change = np.zeros((count, len(model.lattice_vectors), n * n))
-    for here, u, w, x, d in _blocks(model, zone, state, matrices):
+    for here, u, w, x, d in _blocks(model, zone, state.phi, matrices):
         phases = w[:, None] * np.exp(-2j * np.pi * (zone.k[here] @ model.lattice_vectors.T))
         for i in range(count):
             change[i] -= (phases.T @ (u @ (x * d[i]) @ u.conj().swapaxes(1, 2)).reshape(-1, n * n)).imag
     r, a, b = (axis[model.active] for axis in model.position)
     onto = -change.reshape(count, -1, n, n)[:, r, a, b]
-    among = _among_forcings(model, zone, state, matrices)
+    among = _among_forcings(model, zone, state.phi, matrices)
     onto[among.diagonal() == 0] = 0.0
-    return np.block([[-response(model, zone, state, model.active), onto.T], [onto, among]])
+    return np.block([[-engine.response(model, zone, state, model.active), onto.T], [onto, among]])
 
 
 def _second_derivatives(model: MeanFieldModel, bare: Array, *, fixed_filling: bool) -> _Derivatives:
@@ -290,8 +296,7 @@ def _remarks(solution: Solution, closed: _Derivatives, open_: _Derivatives, told
 def _zone_errors(solution: Solution, matrices: Complex, bare: Array) -> dict[str, float]:
     model = solution.model
     doubled = uniform(2 * solution.zone.points, solution.zone.offset)
-    state = evaluate(model, doubled, solution.phi, keep=True)
-    one, two = bare.diagonal()[len(model.active) :], _among_forcings(model, doubled, state, matrices).diagonal()
+    one, two = bare.diagonal()[len(model.active) :], _among_forcings(model, doubled, solution.phi, matrices).diagonal()
     change = np.abs(two - one) / np.maximum(np.maximum(one, two), 1e-300)
     parts = ((HEAT, TEMPERATURE), (SPIN, FIELD), (CHARGE, POTENTIAL))
     return {name: float(change[part].max()) for name, part in parts}

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from kondomf.meanfield.curvature import Curvature
-from kondomf.meanfield.evaluate import bloch_matrix, thermal_weight
+from kondomf.meanfield.evaluate import bloch_matrix, decompositions, thermal_weight
 from kondomf.meanfield.problem import Point, Problem
 from kondomf.model.symmetries import field_matrices, rotated, symmetry_generators
 
@@ -101,8 +101,7 @@ def _responding(problem: Problem, point: Point, fields: Array) -> Array:
     model = problem.model
     n = model.n_majorana
     total = np.zeros((len(model.lattice_vectors), n * n))
-    for part, e, u in point.state.chunks:
-        phases = np.exp(2j * np.pi * (problem.zone.k[part] @ model.lattice_vectors.T))
+    for part, phases, e, u in decompositions(model, problem.zone, point.phi):
         adjoint = u.conj().swapaxes(1, 2)
         inner = thermal_weight(e, model.temperature) * (adjoint @ bloch_matrix(model, fields, phases) @ u)
         weighted = phases.conj() * problem.zone.weight[part, None]

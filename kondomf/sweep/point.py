@@ -7,6 +7,8 @@ from numpy.typing import NDArray
 
 from kondomf.material import material_from_dict
 from kondomf.meanfield import carried_over, solve
+from kondomf.meanfield.engine import engine_of_point, search_work
+from kondomf.meanfield.zone import uniform
 from kondomf.model import build_model
 from kondomf.phases import summarize
 from kondomf.sweep.record import PointResult
@@ -42,10 +44,12 @@ def solve_point(material: dict[str, Any], seed: int, parent: dict[str, NDArray[A
     """
     search = {**material.get("search", {}), "seed": seed}
     point = material_from_dict({**material, "search": search}, where="sweep point")
+    model, zone = build_model(point), uniform(point.zone.points, point.zone.offset)
     neighbour = []
     if parent is not None:
-        neighbour = [carried_over(build_model(point), "neighbour", parent["channels"], parent["p"])]
-    solution = solve(point, extra_starts=neighbour, most_kept=MOST_KEPT)
+        neighbour = [carried_over(model, "neighbour", parent["channels"], parent["p"])]
+    engine = engine_of_point(search_work(model, zone, point.search.starts))
+    solution = solve(point, extra_starts=neighbour, most_kept=MOST_KEPT, engine=engine)
     summary = summarize(solution)
     hybridization = np.array(summary["hybridization_singular_values"])
     spins, electrons = np.array(summary["spin_moment"]), np.array(summary["electron_moment"])

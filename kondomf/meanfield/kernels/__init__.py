@@ -1,0 +1,40 @@
+"""Compiled kernels: eight wave vectors at a time, one per lane of a vector register.
+
+Importing this package is cheap; its modules import numba, which takes as long as some 10^4 small matrices.
+"""
+
+WARM_PRICE = 5e6
+"""Work that takes the plain evaluation as long as it takes to load the kernels."""
+COLD_PRICE = 1e8
+"""The same for compiling them."""
+
+
+def worthwhile(work: float) -> bool:
+    """True if work that a process has done without kernels, in matrices times n^2, would have paid for them.
+
+    Whoever pays rent until it has added up to the price, and then buys, spends at most twice the least possible.
+    Neither loads nor compiles the kernels.
+    """
+    return work >= WARM_PRICE and (work >= COLD_PRICE or ready())
+
+
+def ready() -> bool:
+    """True if the kernels are compiled, here or on disk for this CPU. Does not compile."""
+    from kondomf.meanfield.kernels import evaluation, response
+
+    return evaluation.ready() and response.ready()
+
+
+def kept() -> bool:
+    """True if the compiled kernels are on disk, for this CPU and these sources."""
+    from kondomf.meanfield.kernels import evaluation, response
+
+    return evaluation.kept() and response.kept()
+
+
+def compile_now() -> None:
+    """Compile the kernels, or load them from disk."""
+    from kondomf.meanfield.kernels import evaluation, response
+
+    evaluation.compile_now()
+    response.compile_now()
