@@ -132,8 +132,8 @@ def test_blocks_are_found_and_correlators_between_them_vanish(label, seed):
 
 
 def test_a_decoupled_liquid_splits_into_its_bonds_and_its_spinons():
-    """Bond Majoranas pair up, chi0 hop freely; here so do the electrons. Ann. Phys. 321, 2 (2006), "Anyons in an exactly
-    solved model and beyond"."""
+    """Bond Majoranas pair up, chi0 hop freely; here so do the electrons.
+    Ann. Phys. 321, 2 (2006), "Anyons in an exactly solved model and beyond"."""
     model = build_model(dimensionless(kitaev=-1.0, kondo=1.0))
     phi = standard_starts(model)["decoupled 0"].fields(model)
     assert sorted(blocks_of(model, phi).sizes[:, 0]) == [2] * 8
