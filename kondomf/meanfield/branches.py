@@ -87,7 +87,10 @@ def follow_branches(
     precision: float | None = None,
     progress: Callable[[str], None] | None = None,
 ) -> Diagram:
-    """Branches of minima met from searches at low, middle and high x, and beyond the ends of those found, followed.
+    """Branches of minima met from searches at low, middle and high x, followed to their ends.
+
+    What a descent meets beyond an end is followed too where no branch is lower: soft magnets have a swarm of
+    metastable orientations, each with a short branch of its own.
 
     `key` is a dotted numeric key of the material. Raises InputError for a key that does not vary continuously, an
     empty range, or a range in which the material is refused.
@@ -108,14 +111,13 @@ def follow_branches(
     say = progress or (lambda text: None)
     found: list[Branch] = []
     with threadpool_limits(1, user_api="blas"):
-        seeds = deque(_searched(family, say))
+        seeds = deque((x, start, False) for x, start in _searched(family, say))
         while seeds and len(found) < MOST_BRANCHES:
-            x, start = seeds.popleft()
-            branch = _branch(follower, found, x, start)
+            branch = _branch(follower, found, *seeds.popleft())
             if branch is not None:
                 found.append(branch)
                 say(f"a branch of {_text(branch)}")
-                seeds.extend(end.beyond for end in branch.ends if end.beyond)
+                seeds.extend((*end.beyond, True) for end in branch.ends if end.beyond)
         found.sort(key=lambda branch: branch.range)
         transitions = sorted((*_crossings(follower, found), *_continuous(follower, found)), key=lambda t: t.x)
     return Diagram(family, precision, tuple(found), tuple(transitions), complete=not seeds)
@@ -132,14 +134,20 @@ def _searched(family: Family, say: Callable[[str], None]) -> Iterator[tuple[floa
                 yield x, carried_over(model, one.start, one.model.table, one.p)
 
 
-def _branch(follower: Follower, known: list[Branch], x: float, start: Start) -> Branch | None:
-    """The branch of the minimum that `start` leads to at x, followed both ways; None if known, or no minimum."""
+def _branch(follower: Follower, known: list[Branch], x: float, start: Start, lowest: bool) -> Branch | None:
+    """The branch of the minimum that `start` leads to at x, followed both ways.
+
+    None if it is known or no minimum, or not the lowest there although it must be.
+    """
     family, problem = follower.family, follower.family.at(x)
     down = descend(problem, problem.first_fields(start.p))
     if down.status != "minimum":
         return None
     here = follower.branch_point(x, problem, down.point)
     if here.soft < -ZERO or any(_on(follower, branch, here) for branch in known):
+        return None
+    bound = here.free_energy - SAME_F * abs(here.free_energy)
+    if lowest and any(_energy(follower, branch, x) < bound for branch in known):
         return None
     below, low = follower.follow(here, family.low)
     above, high = follower.follow(here, family.high)
