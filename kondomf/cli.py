@@ -110,7 +110,12 @@ def check(material: Path, out: "Outputs") -> None:
 @click.option("--keep-saddle", is_flag=True, help="with --start: stop at the nearest stationary point, even a saddle")
 @click.option("--quiet", is_flag=True, help="do not report the starts as they finish")
 @click.option("--along", metavar="KEY=FROM:TO", help="follow every branch of minima along a number of the material")
-@click.option("--precision", type=float, metavar="NUMBER", help="with --along: of ends and transitions [default: 1e-4]")
+@click.option(
+    "--precision",
+    type=float,
+    metavar="NUMBER",
+    help="with --along: of the ends [default: range/10000]",
+)
 @outputs("json", "state", "figure", "data")
 @click.pass_context
 def solve(

@@ -30,7 +30,7 @@ from threadpoolctl import threadpool_info, threadpool_limits
 
 from kondomf.material import material_from_dict
 from kondomf.meanfield import evaluate as twin
-from kondomf.meanfield.kernels import evaluation, response
+from kondomf.meanfield.kernels import entries, evaluation, response
 from kondomf.meanfield.zone import ZoneRule, uniform
 from kondomf.model import MeanFieldModel, build_model
 
@@ -66,7 +66,7 @@ class Case:
         return replace(self, model=replace(self.model, temperature=T * temperature))
 
     def bloch_matrices(self) -> NDArray[np.complex128]:
-        return twin.bloch_matrix(self.model, self.phi, self.zone.phases(self.model.lattice_vectors))
+        return twin.bloch_matrix(self.model, self.phi, self.model.phases(self.zone.k))
 
 
 def model_of(size: str) -> MeanFieldModel:
@@ -175,11 +175,11 @@ def gain_of_hashing(threads: int, rounds: int) -> float:
 
 def prepare() -> None:
     """Compile or load the kernels and say how long that took."""
-    for kernel in (evaluation, response):
-        how = "loaded" if kernel.ready() else "compiled"
+    for name, entry in zip(("evaluation", "response"), entries(), strict=True):
+        how = "loaded" if entry.ready() else "compiled"
         began = time.process_time()
-        kernel.compile_now()
-        print(f"{kernel.__name__.rpartition('.')[2]} kernel {how} in {time.process_time() - began:.2f} s of CPU time")
+        entry.compile()
+        print(f"{name} kernel {how} in {time.process_time() - began:.2f} s of CPU time")
 
 
 def main() -> None:

@@ -9,6 +9,16 @@ from kondomf.material import Material, material_from_dict
 T = 1000.0
 """Hopping t in meV."""
 
+EXCHANGE = {
+    "spin_layer__heisenberg_meV": 0.5,
+    "spin_layer__gamma_meV": 0.3,
+    "spin_layer__gamma_prime_meV": -0.2,
+    "spin_layer__heisenberg_2_meV": 0.21,
+    "spin_layer__kitaev_2_meV": 0.17,
+    "spin_layer__heisenberg_3_meV": 0.35,
+}
+"""Every exchange beside the Kitaev one, in units of t, for `dimensionless`."""
+
 
 def dimensionless(
     kitaev: float | list[float] = -1.0, kondo: float = 0.0, filling: float = 1.0, **keys: Any

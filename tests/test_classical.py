@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from materials import T, dimensionless
+from materials import EXCHANGE, T, dimensionless
 
 from kondomf.meanfield.classical import (
     ClassicalEnergy,
@@ -22,12 +22,7 @@ TWO_BY_TWO = [[2, 0], [0, 2]]
 CELLS = ["1x1", "1x2", "sqrt3", TWO_BY_TWO, [[2, 1], [-1, 1]]]
 COUPLINGS = {
     "kitaev": [-1.0, -0.8, 0.6],
-    "spin_layer__heisenberg_meV": 0.5,
-    "spin_layer__gamma_meV": 0.3,
-    "spin_layer__gamma_prime_meV": -0.2,
-    "spin_layer__heisenberg_2_meV": 0.21,
-    "spin_layer__kitaev_2_meV": 0.17,
-    "spin_layer__heisenberg_3_meV": 0.35,
+    **EXCHANGE,
     "spin_layer__g_factor": [2.0, 2.5],
     "magnetic_field__tesla": [800.0, -300.0, 500.0],
 }

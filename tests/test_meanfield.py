@@ -4,7 +4,7 @@ import itertools
 
 import numpy as np
 import pytest
-from materials import T, dimensionless
+from materials import EXCHANGE, T, dimensionless
 from scipy.linalg import block_diag, expm
 
 from kondomf.meanfield.curvature import curvature_at, gauge_copies
@@ -22,12 +22,7 @@ EVERYTHING = {
     "conduction_layer__next_hopping_meV": 0.13,
     "conduction_layer__kane_mele_meV": 0.06,
     "conduction_layer__rashba_meV": 0.11,
-    "spin_layer__heisenberg_meV": 0.5,
-    "spin_layer__gamma_meV": 0.3,
-    "spin_layer__gamma_prime_meV": -0.2,
-    "spin_layer__heisenberg_2_meV": 0.21,
-    "spin_layer__kitaev_2_meV": 0.17,
-    "spin_layer__heisenberg_3_meV": 0.35,
+    **EXCHANGE,
     "kondo__neighbour_coupling_meV": 0.7,
     "spin_layer__g_factor": [2.0, 2.5],
     "magnetic_field__tesla": [800.0, 800.0, 800.0],

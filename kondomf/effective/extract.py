@@ -50,7 +50,7 @@ def fermion_matrix(solution: Solution, k: NDArray[np.float64]) -> tuple[Complex,
     Order of the m fermions: site, species (spinon, electron), spin.
     """
     model = solution.model
-    phases = np.exp(2j * np.pi * (k @ model.lattice_vectors.T))
+    phases = model.phases(k)
     h = bloch_matrix(model, solution.phi, phases)
     count = model.n_majorana
     rows = np.zeros((count // 2, count), dtype=complex)

@@ -129,9 +129,8 @@ def _searched(family: Family, say: Callable[[str], None]) -> Iterator[tuple[floa
         say(f"search at {family.key} = {x:g}")
         solution = solve(family.material_at(x))
         model = family.at(x).model
-        for one in (solution, *solution.others):
-            if one.converged:
-                yield x, carried_over(model, one.start, one.model.table, one.p)
+        for one in solution.minima:
+            yield x, carried_over(model, one.start, one.model.table, one.p)
 
 
 def _branch(follower: Follower, known: list[Branch], x: float, start: Start, lowest: bool) -> Branch | None:
@@ -144,21 +143,18 @@ def _branch(follower: Follower, known: list[Branch], x: float, start: Start, low
     if down.status != "minimum":
         return None
     here = follower.branch_point(x, problem, down.point)
-    if here.soft < -ZERO or any(_on(follower, branch, here) for branch in known):
-        return None
+    others = [state for branch in known if (state := state_at(follower, branch, x)) is not None]
     bound = here.free_energy - SAME_F * abs(here.free_energy)
-    if lowest and any(_energy(follower, branch, x) < bound for branch in known):
+    undercut = lowest and any(state.free_energy < bound for state in others)
+    if here.soft < -ZERO or undercut or any(_same(here, state) for state in others):
         return None
     below, low = follower.follow(here, family.low)
     above, high = follower.follow(here, family.high)
     return Branch((*reversed(below[1:]), *above), (low, high))
 
 
-def _on(follower: Follower, branch: Branch, here: BranchPoint) -> bool:
-    """True if the state of `branch` at the x of `here` is the same up to gauge and symmetry."""
-    there = state_at(follower, branch, here.x)
-    if there is None:
-        return False
+def _same(here: BranchPoint, there: BranchPoint) -> bool:
+    """True if two states of one x are the same up to gauge and symmetry."""
     one, other = (trial(state.model, "", "minimum", state.point) for state in (here, there))
     return one.same_state(other)
 

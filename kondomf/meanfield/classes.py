@@ -23,10 +23,9 @@ def class_basis(model: MeanFieldModel, phase: str) -> Array | None:
 def _without_hybridization(model: MeanFieldModel, moments: bool) -> Array:
     active = model.active
     bonds = ~model.hybridization[active]
-    onsite = (model.table[active, 2:] == 0).all(axis=1) & (model.table[active, 0] // 8 == model.table[active, 1] // 8)
     if moments:
         return np.eye(len(active))[:, bonds]
-    basis = np.hstack([np.eye(len(active))[:, bonds & ~onsite], model.c[:, active].T])
+    basis = np.hstack([np.eye(len(active))[:, bonds & ~model.onsite[active]], model.c[:, active].T])
     return np.linalg.qr(basis)[0]
 
 

@@ -20,6 +20,7 @@ from kondomf.meanfield.driver import Settings, descend, is_decoupled, is_station
 from kondomf.meanfield.engine import NUMPY, Engine
 from kondomf.meanfield.problem import Point, Problem, point_at
 from kondomf.meanfield.starts import Start
+from kondomf.meanfield.zero_modes import ZERO
 from kondomf.meanfield.zone import uniform
 from kondomf.model import MeanFieldModel, build_model
 
@@ -32,8 +33,6 @@ DIFFERENCE = 1e-5
 """Step in u of the derivatives with respect to the parameter."""
 STRAIGHT = 0.8
 """Cosine between a step and the one before, below which it may have jumped to another branch."""
-ZERO = 1e-6
-"""Curvatures of smaller size are zero modes."""
 AROUND = 10
 """Distance at which the state beyond the end of a branch is looked at, in units of the precision."""
 NO_JUMP = 0.01
@@ -79,13 +78,14 @@ class Family:
 class BranchPoint:
     """A stationary state of `material` at x.
 
-    soft : lowest curvature that is no zero mode, over the gauge copies if they count.
+    modes : its curvature. soft : the lowest that is no zero mode, over the gauge copies if they count.
     """
 
     material: Material
     x: float
     problem: Problem
     point: Point
+    modes: Curvature
     soft: float
 
     @property
@@ -104,7 +104,7 @@ class BranchPoint:
     @property
     def free_energy(self) -> float:
         """F in meV per primitive cell."""
-        return self.point.free_energy / self.problem.model.cell.size
+        return self.point.free_energy / self.model.cell.size
 
 
 @dataclass(frozen=True)
@@ -172,17 +172,12 @@ class Follower:
 
     def branch_point(self, x: float, problem: Problem, point: Point) -> BranchPoint:
         """The point with its lowest curvature."""
-        points = [point]
-        if self.copies and is_decoupled(problem, point, self.settings):
-            points += gauge_copies(problem, point)
-        eigenvalues = np.concatenate([curvature_at(problem, p).eigenvalues for p in points])
-        return BranchPoint(
-            self.family.material_at(x),
-            x,
-            problem,
-            point,
-            float(eigenvalues[np.abs(eigenvalues) > ZERO].min(initial=1.0)),
-        )
+        modes = curvature_at(problem, point)
+        copies = gauge_copies(problem, point) if self.copies and is_decoupled(problem, point, self.settings) else []
+        all_modes = [modes, *(curvature_at(problem, copy) for copy in copies)]
+        eigenvalues = np.concatenate([each.eigenvalues for each in all_modes])
+        soft = float(eigenvalues[np.abs(eigenvalues) > ZERO].min(initial=1.0))
+        return BranchPoint(self.family.material_at(x), x, problem, point, modes, soft)
 
     def at(self, here: BranchPoint, x: float) -> BranchPoint | None:
         """The state of the branch through `here` at x nearby; None where Newton steps do not lead there."""
@@ -221,7 +216,7 @@ class Follower:
 
     def _slope(self, here: BranchPoint) -> Array:
         """Unit vector along (dP, du) of the branch in the direction of growing u, by linear response."""
-        linear = self._linearized(here.x, here.problem, here.point)
+        linear = self._linearized(here.x, here.problem, here.point, here.modes)
         y = np.zeros(len(linear.f))
         y[linear.moving] = -linear.f[linear.moving] / linear.modes.eigenvalues[linear.moving]
         step = np.append(linear.drift + linear.modes.root_vectors @ y, 1.0)
@@ -250,7 +245,7 @@ class Follower:
             close = abs(plane.miss(u, p)) <= 1e-3 * abs(plane.s)
             if steps and close and is_stationary(point, problem.model.scale, self.settings):
                 return _Found(problem, point, x, steps)
-            at = self._linearized(x, problem, point)
+            at = self._linearized(x, problem, point, curvature_at(problem, point) if steps else here.modes)
             r = point.residual[problem.model.active]
             along = plane.n @ at.modes.root_vectors
             moving = at.moving | (np.abs(along) > 1e-3 * np.abs(along).max(initial=1e-300))
@@ -271,11 +266,10 @@ class Follower:
                 return None
         return None
 
-    def _linearized(self, x: float, problem: Problem, point: Point) -> _Linear:
+    def _linearized(self, x: float, problem: Problem, point: Point, modes: Curvature) -> _Linear:
         """Derivatives with respect to u, towards the middle of the range, by a small difference."""
         family, active = self.family, problem.model.active
         du = DIFFERENCE * (1.0 if 2 * x < family.low + family.high else -1.0)
-        modes = curvature_at(problem, point)
         _, ahead = family.move(point, x + du * family.span)
         pull = (ahead.residual - point.residual)[active] / du
         f = modes.coordinates(pull)
@@ -351,7 +345,6 @@ def _correlators(problem: Problem, point: Point) -> Array:
 
 def sizes(model: MeanFieldModel, p: Array) -> Array:
     """Root mean square per site of hybridizations, on-site spinon and electron bilinears, and spinon bonds, (4,)."""
-    spinons = (model.species == 0).all(axis=1)
-    onsite = (model.table[:, 2:] == 0).all(axis=1) & (model.table[:, 0] // 8 == model.table[:, 1] // 8)
+    spinons, onsite = (model.species == 0).all(axis=1), model.onsite
     groups = (model.hybridization, spinons & onsite, ~spinons & ~model.hybridization & onsite, spinons & ~onsite)
     return np.sqrt([p[group] @ p[group] / model.cell.n_sites for group in groups])

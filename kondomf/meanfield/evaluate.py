@@ -66,8 +66,13 @@ def decompositions(
     """Part of the zone, phases e^(ik.R) (Nk, NR), eigenvalues (Nk, n) and eigenvectors (Nk, n, n) of h(k), in turn."""
     for start in range(0, len(zone.k), CHUNK):
         part = slice(start, start + CHUNK)
-        phases = np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
+        phases = model.phases(zone.k[part])
         yield part, phases, *np.linalg.eigh(bloch_matrix(model, phi, phases))
+
+
+def lattice_sum(phases: Complex, weight: Array, matrix: Complex) -> Array:
+    """Re[i sum_k w_k matrix_ab e^(-ik.R)] of matrices (Nk, n, n), for phases e^(ik.R) (Nk, NR): (NR, n, n)."""
+    return -((phases.conj() * weight[:, None]).T @ matrix.reshape(len(matrix), -1)).imag.reshape(-1, *matrix.shape[1:])
 
 
 def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = False) -> Evaluation:
@@ -79,7 +84,7 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
     t = model.temperature
     n = model.n_majorana
     omega = entropy = 0.0
-    real_space = np.zeros((len(model.lattice_vectors), n * n), dtype=complex)
+    correlators = np.zeros((len(model.lattice_vectors), n, n))
     kept = []
     bound = 4 * np.abs(phi).max() * len(phi)
     if not bound < HUGE * t:  # also catches NaN, on which eigh would raise
@@ -91,11 +96,9 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, keep: bool = 
         w = zone.weight[part]
         omega -= t / 2 * float(w @ (x / 2 + np.log1p(y)).sum(axis=1))
         entropy += float(w @ (np.log1p(y) + x * y / (1 + y)).sum(axis=1)) / 2
-        matrix = (u * tanh[:, None, :]) @ u.conj().swapaxes(1, 2)
-        real_space += (phases.conj() * w[:, None]).T @ matrix.reshape(-1, n * n)
+        correlators += lattice_sum(phases, w, (u * tanh[:, None, :]) @ u.conj().swapaxes(1, 2))
         if keep:
             kept.append((part, e, u))
-    correlators = -real_space.reshape(-1, n, n).imag
     return Evaluation(phi, omega, entropy, correlators[model.position], correlators, tuple(kept))
 
 
@@ -138,7 +141,7 @@ def response(model: MeanFieldModel, zone: ZoneRule, state: Evaluation, channels:
     pi = np.zeros((count, count))
     step = max(1, BLOCK // (count * n * n))
     for part, e, u in state.chunks:
-        phases = 2j * np.exp(2j * np.pi * (zone.k[part] @ model.lattice_vectors.T))
+        phases = 2j * model.phases(zone.k[part])
         root = np.sqrt(zone.weight[part, None, None] * thermal_weight(e, model.temperature))
         for start in range(0, len(e), step):
             block = slice(start, start + step)

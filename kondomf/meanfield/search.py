@@ -14,7 +14,7 @@ from kondomf.meanfield.curvature import Curvature, curvature_at
 from kondomf.meanfield.driver import Descent, Settings, certify, descend
 from kondomf.meanfield.engine import Engine, engine_for, search_work
 from kondomf.meanfield.problem import Point, Problem, point_at
-from kondomf.meanfield.solution import SAME_ENERGY, Solution, Trial, trial
+from kondomf.meanfield.solution import SAME_ENERGY, Solution, Trial, grouped, trial
 from kondomf.meanfield.starts import Start, standard_starts, starts
 from kondomf.meanfield.zero_modes import SoftMode, ZeroModes, soft_mode, zero_modes
 from kondomf.meanfield.zone import uniform
@@ -125,14 +125,15 @@ def _descend_all(
 
 def _distinct(ends: list[_End]) -> list[_End]:
     """One end per state, the settled ones first, each lowest first; an unsettled end near a settled one is dropped."""
+    ordered = sorted(ends, key=lambda end: (not end.settled, end.free_energy))
     result: list[_End] = []
-    for end in sorted(ends, key=lambda end: (not end.settled, end.free_energy)):
-        home = next((i for i, other in enumerate(result) if end.trial.same_state(other.trial)), None)
-        if home is None:
-            result.append(end)
-        elif end.settled:  # the first start speaks for the state: F of the others differs by rounding
-            first = min(result[home], end, key=lambda end: end.number)
-            result[home] = replace(first, found=result[home].found + end.found)
+    for group in grouped([end.trial for end in ordered]):
+        settled = [ordered[i] for i in group if ordered[i].settled]
+        if settled:  # the first start speaks for the state: F of the others differs by rounding
+            first = min(settled, key=lambda end: end.number)
+            result.append(replace(first, found=sum(end.found for end in settled)))
+        else:
+            result.append(ordered[group[0]])
     return result
 
 

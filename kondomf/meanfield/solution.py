@@ -12,7 +12,7 @@ from kondomf.meanfield.starts import Start, carried_over
 from kondomf.meanfield.zero_modes import SoftMode, ZeroModes
 from kondomf.meanfield.zone import ZoneRule
 from kondomf.model import MeanFieldModel
-from kondomf.model.majorana import spin
+from kondomf.model.majorana import ELECTRON, SPINON, majorana, spin
 
 Array = NDArray[np.float64]
 
@@ -26,9 +26,9 @@ class Trial:
     """How one start ended, by quantities that gauge transformations, symmetries and domains leave alone.
 
     hybridization : root mean square of <i chi^mu eta^nu> over mu, nu and sites (those between sites included in the
-    sum). spin_moment, electron_moment : root
-    mean square over sites of the size of <S> and <s>. net_moment : size of the mean <S>; it tells a ferromagnet from
-    the antiferromagnets that a Kitaev magnet may hold at the same F. Moments in units of hbar.
+    sum). spin_moment, electron_moment : root mean square over sites of the size of <S> and <s>. net_moment : size of
+    the mean <S>; it tells a ferromagnet from the antiferromagnets that a Kitaev magnet may hold at the same F.
+    Moments in units of hbar.
     """
 
     start: str
@@ -55,15 +55,18 @@ class Trial:
 ORDER_PARAMETERS = ("hybridization", "spin_moment", "electron_moment", "net_moment")
 
 
+def moments(model: MeanFieldModel, correlators: Array, species: int) -> Array:
+    """<S> (or <s>) of every site along the spin axes, (sites, 3), in units of hbar, from all correlators (NR, n, n)."""
+    home = correlators[np.flatnonzero(~model.lattice_vectors.any(axis=1))[0]]
+    blocks = [home[a : a + 4, a : a + 4] for a in (majorana(i, species, 0) for i in range(model.cell.n_sites))]
+    return np.array([[sum(x * block[mu, nu] for x, mu, nu in s) for s in spin("so4")] for block in blocks])
+
+
 def trial(model: MeanFieldModel, start: str, status: str, point: Point) -> Trial:
     """How a start ended at `point`."""
     sites = model.cell.n_sites
-    home = point.state.correlators[np.flatnonzero(~model.lattice_vectors.any(axis=1))[0]]
     w = point.p[model.hybridization]
-    spins, electrons = (
-        np.array([[sum(x * block[mu, nu] for x, mu, nu in s) for s in spin("so4")] for block in blocks])
-        for blocks in ([home[a : a + 4, a : a + 4] for a in range(first, 8 * sites, 8)] for first in (0, 4))
-    )
+    spins, electrons = (moments(model, point.state.correlators, species) for species in (SPINON, ELECTRON))
     return Trial(
         start,
         status,
@@ -75,16 +78,22 @@ def trial(model: MeanFieldModel, start: str, status: str, point: Point) -> Trial
     )
 
 
+def grouped(trials: Sequence[Trial]) -> list[list[int]]:
+    """Numbers of the trials that ended in each state, states and trials in the order given."""
+    result: list[list[int]] = []
+    for i, one in enumerate(trials):
+        home = next((group for group in result if one.same_state(trials[group[0]])), None)
+        if home is None:
+            result.append([i])
+        else:
+            home.append(i)
+    return result
+
+
 def distinct_minima(trials: Sequence[Trial]) -> tuple[tuple[Trial, int], ...]:
     """The distinct minima among `trials`, lowest first, and how many trials ended in each."""
-    result: list[tuple[Trial, int]] = []
-    for end in sorted((t for t in trials if t.status == "minimum"), key=lambda t: t.free_energy_meV_per_cell):
-        home = next((i for i, (other, _) in enumerate(result) if end.same_state(other)), None)
-        if home is None:
-            result.append((end, 1))
-        else:
-            result[home] = (result[home][0], result[home][1] + 1)
-    return tuple(result)
+    ends = sorted((t for t in trials if t.status == "minimum"), key=lambda t: t.free_energy_meV_per_cell)
+    return tuple((ends[group[0]], len(group)) for group in grouped(ends))
 
 
 def chance_of_another(found: Sequence[int]) -> float | None:

@@ -13,18 +13,18 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 from scipy.constants import N_A
-from scipy.linalg import block_diag, expm
+from scipy.linalg import block_diag
 
 from kondomf.material import Material, material_from_dict
 from kondomf.meanfield.curvature import spectral_form
 from kondomf.meanfield.engine import Engine, engine_for
-from kondomf.meanfield.evaluate import Complex, Evaluation, bloch_matrix, decompositions, thermal_weight
+from kondomf.meanfield.evaluate import Complex, Evaluation, bloch_matrix, decompositions, lattice_sum, thermal_weight
 from kondomf.meanfield.solution import Solution
-from kondomf.meanfield.zero_modes import ZERO
+from kondomf.meanfield.zero_modes import ZERO, conserving_generators
 from kondomf.meanfield.zone import ZoneRule, uniform
 from kondomf.model import MeanFieldModel
 from kondomf.model.majorana import ELECTRON, SPINON, majorana, spin
-from kondomf.model.symmetries import field_matrices, rotated, symmetry_generators
+from kondomf.model.symmetries import field_matrices, rotated
 from kondomf.units import BOHR_MAGNETON, MEV
 
 Array = NDArray[np.float64]
@@ -207,14 +207,13 @@ def _bare_response(
 
     A forcing changes tanh(h/2T) by U (X o U+ D U) U+, and with it the correlators.
     """
-    n, count = model.n_majorana, 1 + len(matrices)
-    change = np.zeros((count, len(model.lattice_vectors), n * n))
+    change = np.zeros((1 + len(matrices), *state.correlators.shape))
     for here, u, w, x, d in _blocks(model, zone, state.phi, matrices):
-        phases = w[:, None] * np.exp(-2j * np.pi * (zone.k[here] @ model.lattice_vectors.T))
-        for i in range(count):
-            change[i] -= (phases.T @ (u @ (x * d[i]) @ u.conj().swapaxes(1, 2)).reshape(-1, n * n)).imag
+        phases = model.phases(zone.k[here])
+        for total, forcing in zip(change, d, strict=True):
+            total += lattice_sum(phases, w, u @ (x * forcing) @ u.conj().swapaxes(1, 2))
     r, a, b = (axis[model.active] for axis in model.position)
-    onto = -change.reshape(count, -1, n, n)[:, r, a, b]
+    onto = -change[:, r, a, b]
     among = _among_forcings(model, zone, state.phi, matrices)
     onto[among.diagonal() == 0] = 0.0
     return np.block([[-engine.response(model, zone, state, model.active), onto.T], [onto, among]])
@@ -256,11 +255,9 @@ def _told_apart(solution: Solution, state: Evaluation, matrices: Complex) -> NDA
         return np.ones(len(matrices), dtype=bool)
     told = np.zeros(len(matrices), dtype=bool)
     fields = field_matrices(model, solution.phi)
-    for generator in symmetry_generators(model):
-        turn = expm(0.7 * generator.x)
-        moved = (turn @ state.correlators @ turn.T)[model.position] - state.p
+    for generator in conserving_generators(model, state.correlators):
         broken = np.abs(rotated(model, fields, generator.x)).max() > STATIONARY * model.scale
-        if broken and not generator.gauge and np.abs(model.c @ moved).max() < STATIONARY:
+        if broken and not generator.gauge:
             turned = np.abs(matrices @ generator.x - generator.x @ matrices).max(axis=(1, 2))
             told |= turned > 1e-9 * np.abs(matrices).max(axis=(1, 2))
     return told

@@ -1,5 +1,6 @@
 """Modes of the curvature: zero modes accounted for by symmetries, and what a mode does to the state."""
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -7,14 +8,17 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from kondomf.meanfield.curvature import Curvature
-from kondomf.meanfield.evaluate import bloch_matrix, decompositions, thermal_weight
+from kondomf.meanfield.evaluate import bloch_matrix, decompositions, lattice_sum, thermal_weight
 from kondomf.meanfield.problem import Point, Problem
-from kondomf.model.symmetries import field_matrices, rotated, symmetry_generators
+from kondomf.model import MeanFieldModel
+from kondomf.model.symmetries import Generator, field_matrices, rotated, symmetry_generators
 
 Array = NDArray[np.float64]
 
 ZERO = 1e-6
 """Curvatures of smaller size are zero modes."""
+CONSERVED = 1e-7
+"""A constrained quantity that a rotation changes by less is conserved."""
 
 
 @dataclass(frozen=True)
@@ -30,23 +34,30 @@ class ZeroModes:
         return self.count - self.gauge - self.broken_generators
 
 
+def conserving_generators(model: MeanFieldModel, correlators: Array) -> Iterator[Generator]:
+    """Generators of symmetries of the model that leave the constrained quantities of a state (NR, n, n) alone too.
+
+    A finite rotation decides, since at n != 1 a pair rotation changes the density only in second order.
+    """
+    for generator in symmetry_generators(model):
+        turn = expm(0.7 * generator.x)
+        moved = (turn @ correlators @ turn.T - correlators)[model.position]
+        if np.abs(model.c @ moved).max(initial=0.0) < CONSERVED:
+            yield generator
+
+
 def zero_modes(problem: Problem, point: Point, full: Curvature) -> ZeroModes:
     """Count zeros of the full-space curvature and the independent field changes that symmetries make at `point`.
 
-    A generator counts when it leaves the model invariant and, at this state, the constrained quantities too; a
-    finite rotation decides, since at n != 1 a pair rotation changes the density only in second order.
+    A generator counts when it leaves the model invariant and, at this state, the constrained quantities too.
     """
     model = problem.model
-    correlators = point.state.correlators
     fields = field_matrices(model, point.phi)
     gauge: list[Array] = []
     physical: list[Array] = []
-    for generator in symmetry_generators(model):
-        turn = expm(0.7 * generator.x)
-        moved = (turn @ correlators @ turn.T)[model.position] - point.p
-        if np.abs(model.c @ moved).max(initial=0.0) < 1e-7:
-            change = full.coordinates(rotated(model, fields, generator.x)[model.active])
-            (gauge if generator.gauge else physical).append(change)
+    for generator in conserving_generators(model, point.state.correlators):
+        change = full.coordinates(rotated(model, fields, generator.x)[model.active])
+        (gauge if generator.gauge else physical).append(change)
     scale = np.sqrt(model.scale) * 1e-5
     n_gauge, n_all = _rank(gauge, scale), _rank(gauge + physical, scale)
     return ZeroModes(int((np.abs(full.eigenvalues) < ZERO).sum()), n_gauge, n_all - n_gauge)
@@ -99,11 +110,9 @@ def _responding(problem: Problem, point: Point, fields: Array) -> Array:
     d tanh(h/2T) = U (X o U+ dh U) U+ with the X of the response matrix.
     """
     model = problem.model
-    n = model.n_majorana
-    total = np.zeros((len(model.lattice_vectors), n * n))
+    total = np.zeros_like(point.state.correlators)
     for part, phases, e, u in decompositions(model, problem.zone, point.phi):
         adjoint = u.conj().swapaxes(1, 2)
         inner = thermal_weight(e, model.temperature) * (adjoint @ bloch_matrix(model, fields, phases) @ u)
-        weighted = phases.conj() * problem.zone.weight[part, None]
-        total -= (weighted.T @ (u @ inner @ adjoint).reshape(-1, n * n)).imag
-    return total.reshape(-1, n, n)
+        total += lattice_sum(phases, problem.zone.weight[part], u @ inner @ adjoint)
+    return total

@@ -21,10 +21,6 @@ class ZoneRule:
     points: int
     offset: str
 
-    def phases(self, vectors: NDArray[np.int64]) -> NDArray[np.complex128]:
-        """exp(i k.R), shape (Nk, NR), for lattice vectors (NR, 2)."""
-        return np.exp(2j * np.pi * (self.k @ vectors.T))
-
 
 def uniform(points: int, offset: str) -> ZoneRule:
     """Uniform rule of points x points wave vectors ((i + o1)/L, (j + o2)/L).

@@ -51,6 +51,10 @@ class MeanFieldModel:
         """The distinct R of the channels, (NR, 2)."""
         return np.unique(self.table[:, 2:], axis=0)
 
+    def phases(self, k: Array) -> NDArray[np.complex128]:
+        """e^(ik.R) of `lattice_vectors` at wave vectors k (Nk, 2) in units of the reciprocal vectors, (Nk, NR)."""
+        return np.asarray(np.exp(2j * np.pi * (k @ self.lattice_vectors.T)))
+
     @cached_property
     def position(self) -> tuple[NDArray, NDArray, NDArray]:
         """Per channel: index of its R in `lattice_vectors`, a, b. Index of the channel in an (NR, n, n) array."""
@@ -76,6 +80,12 @@ class MeanFieldModel:
     def hybridization(self) -> NDArray[np.bool_]:
         """True for channels that join a spinon and an electron Majorana, (N,)."""
         return self.species[:, 0] != self.species[:, 1]
+
+    @cached_property
+    def onsite(self) -> NDArray[np.bool_]:
+        """True for channels that join two Majoranas of one site, (N,)."""
+        same = self.table[:, 0] // PER_SITE == self.table[:, 1] // PER_SITE
+        return np.asarray(same & (self.table[:, 2:] == 0).all(axis=1))
 
     @cached_property
     def scale(self) -> float:

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from kondomf.material import material_from_dict
+from kondomf.meanfield.solution import moments
 from kondomf.model import MeanFieldModel
 from kondomf.model.build import exchange_matrix
 from kondomf.model.lattice import FIRST
@@ -74,16 +75,12 @@ class Order:
     @cached_property
     def spin_moment(self) -> Array:
         """<S> of every site along the spin axes, (sites, 3), in units of hbar."""
-        return self._moments(SPINON)
+        return moments(self.solution.model, self.solution.correlators, SPINON)
 
     @cached_property
     def electron_moment(self) -> Array:
         """<s> of the conduction electrons of every site, (sites, 3), in units of hbar."""
-        return self._moments(ELECTRON)
-
-    def _moments(self, species: int) -> Array:
-        blocks = [self.block((i, species), (i, species)) for i in self.sites]
-        return np.array([[sum(x * g[mu, nu] for x, mu, nu in s) for s in spin("so4")] for g in blocks])
+        return moments(self.solution.model, self.solution.correlators, ELECTRON)
 
     @cached_property
     def density(self) -> Array:

@@ -34,7 +34,7 @@ class Bands:
 def bands(solution: Solution, k: Array) -> Bands:
     """Bands at wave vectors k (Nk, 2) in units of the reciprocal vectors of the magnetic cell."""
     model = solution.model
-    phases = np.exp(2j * np.pi * (np.asarray(k) @ model.lattice_vectors.T))
+    phases = model.phases(np.asarray(k))
     energy, u = np.linalg.eigh(bloch_matrix(model, solution.phi, phases))
     electrons = np.arange(model.n_majorana) % PER_SITE >= 4
     conduction = (np.abs(u[:, electrons]) ** 2).sum(axis=1)
@@ -96,7 +96,7 @@ def _smallest(solution: Solution, rows: NDArray[np.int64], points: int) -> float
     model = solution.model
 
     def lowest(k: Array) -> Array:
-        phases = np.exp(2j * np.pi * (np.atleast_2d(k) @ model.lattice_vectors.T))
+        phases = model.phases(np.atleast_2d(k))
         block = bloch_matrix(model, solution.phi, phases)[:, rows[:, None], rows]
         return np.abs(np.linalg.eigvalsh(block)).min(axis=1)
 

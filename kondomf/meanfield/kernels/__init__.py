@@ -3,6 +3,11 @@
 Importing this package is cheap; its modules import numba, which takes as long as some 10^4 small matrices.
 """
 
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from kondomf.meanfield.kernels.entry import Entry
+
 WARM_PRICE = 5e6
 """Work that takes the plain evaluation as long as it takes to load the kernels."""
 COLD_PRICE = 1e8
@@ -18,23 +23,24 @@ def worthwhile(work: float) -> bool:
     return work >= WARM_PRICE and (work >= COLD_PRICE or ready())
 
 
-def ready() -> bool:
-    """True if the kernels are compiled, here or on disk for this CPU. Does not compile."""
+def entries() -> tuple["Entry", "Entry"]:
+    """The compiled functions of evaluation and response."""
     from kondomf.meanfield.kernels import evaluation, response
 
-    return evaluation.ready() and response.ready()
+    return evaluation.evaluate_parts, response.response_parts
+
+
+def ready() -> bool:
+    """True if the kernels are compiled, here or on disk for this CPU. Does not compile."""
+    return all(entry.ready() for entry in entries())
 
 
 def kept() -> bool:
     """True if the compiled kernels are on disk, for this CPU and these sources."""
-    from kondomf.meanfield.kernels import evaluation, response
-
-    return evaluation.kept() and response.kept()
+    return all(entry.kept() for entry in entries())
 
 
 def compile_now() -> None:
     """Compile the kernels, or load them from disk."""
-    from kondomf.meanfield.kernels import evaluation, response
-
-    evaluation.compile_now()
-    response.compile_now()
+    for entry in entries():
+        entry.compile()

@@ -1,7 +1,7 @@
 """Eigenvalues and eigenvectors of eight Hermitian matrices at a time, one per lane.
 
-The layout is that of `tridiagonal`. Source of the steps: G. H. Golub and C. F. Van Loan, Matrix Computations, chapter 8
-("Implicit symmetric QR step with Wilkinson shift").
+The layout is that of `tridiagonal`. Source of the steps: "Matrix Computations", chapter 8, implicit symmetric
+QR step with Wilkinson shift (textbook).
 """
 
 from typing import Any

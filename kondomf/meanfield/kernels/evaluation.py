@@ -13,7 +13,7 @@ from kondomf.meanfield.evaluate import HUGE, Evaluation, undefined
 from kondomf.meanfield.kernels.blocks import blocks_of
 from kondomf.meanfield.kernels.eigen import LEVELS, MATRIX, STATES, eigenvalues, eigenvectors, workspace
 from kondomf.meanfield.kernels.entry import OPTIONS, entry
-from kondomf.meanfield.kernels.threads import over_shares
+from kondomf.meanfield.kernels.threads import over_shares, parts_of
 from kondomf.meanfield.kernels.tridiagonal import aligned
 from kondomf.meanfield.kernels.vector import (
     LANES,
@@ -43,8 +43,6 @@ LARGE = 700.0
 """e^-x of a larger x is tiny anyway, and slow to find."""
 PARTS = 64
 """Most parts of a zone; fixed, so that the order of the sums is."""
-SMALLEST_PART = 4
-"""Groups of eight wave vectors that a part has at least."""
 
 
 @njit(**OPTIONS)
@@ -258,9 +256,8 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, threads: int 
         return undefined(model, phi)
     blocks = blocks_of(model, phi)
     fields = blocks.factors * phi[blocks.channels, None]
-    count = -(-len(zone.k) // LANES)
-    groups = max(SMALLEST_PART, -(-count // PARTS))
-    sums = np.empty((-(-count // groups), 2 + len(blocks.targets)))
+    parts, groups = parts_of(len(zone.k), PARTS)
+    sums = np.empty((parts, 2 + len(blocks.targets)))
 
     def work(first: int, last: int) -> bool:
         lists = blocks.sizes, blocks.vectors, blocks.terms, fields, blocks.tiles, blocks.targets
@@ -272,18 +269,3 @@ def evaluate(model: MeanFieldModel, zone: ZoneRule, phi: Array, *, threads: int 
     correlators = np.zeros((len(model.lattice_vectors), n, n))
     correlators.reshape(-1)[blocks.places] = blocks.signs * total[2:][blocks.sources]
     return Evaluation(phi, -t / 2 * float(energy), float(entropy) / 2, correlators[model.position], correlators, ())
-
-
-def ready() -> bool:
-    """True if the kernel is compiled, here or on disk for this CPU; does not compile."""
-    return evaluate_parts.ready()
-
-
-def kept() -> bool:
-    """True if the compiled kernel is on disk."""
-    return evaluate_parts.kept()
-
-
-def compile_now() -> None:
-    """Compile the kernel, or load it from disk."""
-    evaluate_parts.compile()

@@ -16,7 +16,7 @@ from kondomf.meanfield.kernels.eigen import aligned, eigenvalues, eigenvectors, 
 from kondomf.meanfield.kernels.entry import OPTIONS, entry
 from kondomf.meanfield.kernels.evaluation import bloch_matrix, bloch_phases
 from kondomf.meanfield.kernels.pairs import STRIDE, TILE, add_pairs, collect, components, level_factors, multiply
-from kondomf.meanfield.kernels.threads import over_shares
+from kondomf.meanfield.kernels.threads import over_shares, parts_of
 from kondomf.meanfield.kernels.vector import LANES, load, store
 from kondomf.meanfield.zone import ZoneRule
 from kondomf.model import MeanFieldModel
@@ -31,8 +31,6 @@ SMALL = 1e-2
 """A response below this, in the same units, is computed again with all pairs."""
 PARTS = 32
 """Most parts of a zone; fixed, so that the order of the sums is."""
-SMALLEST_PART = 4
-"""Groups of eight wave vectors that a part has at least."""
 
 
 @njit(**OPTIONS)
@@ -195,9 +193,8 @@ def _sum_of_pairs(
     blocks = blocks_of(model, phi)
     layout, lengths = _layout(*(x.tobytes() for x in (model.table, channels, blocks.vectors, blocks.label)))
     fields = blocks.factors * phi[blocks.channels, None]
-    count = -(-len(zone.k) // LANES)
-    groups = max(SMALLEST_PART, -(-count // PARTS))
-    result = np.zeros((-(-count // groups), len(channels), len(channels)))
+    parts, groups = parts_of(len(zone.k), PARTS)
+    result = np.zeros((parts, len(channels), len(channels)))
 
     def work(first: int, last: int) -> bool:
         lists = blocks.sizes, blocks.vectors, blocks.terms, fields, layout, lengths
@@ -205,18 +202,3 @@ def _sum_of_pairs(
 
     solved = over_shares(work, len(result), threads)
     return result.sum(axis=0) if solved else np.full(result.shape[1:], np.nan)
-
-
-def ready() -> bool:
-    """True if the kernel is compiled, here or on disk for this CPU; does not compile."""
-    return response_parts.ready()
-
-
-def kept() -> bool:
-    """True if the compiled kernel is on disk."""
-    return response_parts.kept()
-
-
-def compile_now() -> None:
-    """Compile the kernel, or load it from disk."""
-    response_parts.compile()

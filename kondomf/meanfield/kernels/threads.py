@@ -6,6 +6,10 @@ from concurrent.futures import ThreadPoolExecutor
 from functools import lru_cache
 from itertools import pairwise
 
+from kondomf.meanfield.kernels.vector import LANES
+
+SMALLEST_PART = 4
+"""Groups of eight wave vectors that a part of a zone has at least."""
 SHARES = 4
 """Shares per thread: where a core is busy with something else, the other threads take more of them."""
 
@@ -14,6 +18,13 @@ SHARES = 4
 def _pool(threads: int, process: int) -> ThreadPoolExecutor:
     """Threads that wait for work; a process forked from this one has none of them and gets its own."""
     return ThreadPoolExecutor(threads, thread_name_prefix="kondomf")
+
+
+def parts_of(points: int, most: int) -> tuple[int, int]:
+    """Number of parts of a zone, at most `most`, and of the groups of eight wave vectors in each."""
+    count = -(-points // LANES)
+    groups = max(SMALLEST_PART, -(-count // most))
+    return -(-count // groups), groups
 
 
 def over_shares(work: Callable[[int, int], bool], count: int, threads: int) -> bool:

@@ -2,7 +2,7 @@
 
 All arrays are flat float64 with eight lanes innermost. A complex number takes 16 elements: 8 real parts, then 8
 imaginary parts. The Hermitian matrix is given by its lower triangle, column after column: element (i, j), i >= j,
-starts at 16 (j n + i). Source of the steps: G. H. Golub and C. F. Van Loan, Matrix Computations, chapter 8
+starts at 16 (j n + i). Source of the steps: "Matrix Computations", chapter 8
 ("Householder tridiagonalization").
 """
 
